@@ -63,6 +63,8 @@ type Reading struct {
 	Span        float64 // seconds of sound the beat rests on
 	Phase       float64 // beat phase, cycles, same sign as Beat, continuous within one PhaseRun
 	PhaseRun    int     // grows by one each time continuity of Phase is lost
+	InputDBFS   float64 // rms level of the input in this second, dB of a full-scale sine; -Inf never, NaN when no sample came
+	Clipped     int     // samples at or beyond full scale in this second
 	Flags       []Flag  // in the order of Flags
 	Why         string  // one short sentence: why it believes what it believes
 }
@@ -72,7 +74,7 @@ func Blank(t float64, s State) Reading {
 	n := math.NaN()
 	return Reading{T: t, State: s, Beat: n, BeatU: n, BeatAbs: n, Error: n, Offset: n, OffsetU: n,
 		CarrierTone: n, LocalTone: n, CarrierDBFS: n, LocalDBFS: n, CarrierCN0: n, LocalCN0: n,
-		SpreadHz: n, Span: n, Phase: n}
+		SpreadHz: n, Span: n, Phase: n, InputDBFS: n}
 }
 
 // Has reports whether the reading carries flag f.
@@ -136,6 +138,8 @@ type readingJSON struct {
 	Span        Num    `json:"span_s"`
 	Phase       Num    `json:"phase_cycles"`
 	PhaseRun    int    `json:"phase_run"`
+	InputDBFS   Num    `json:"input_dbfs"`
+	Clipped     int    `json:"clipped_samples"`
 	Flags       []Flag `json:"flags"`
 	Why         string `json:"why,omitempty"`
 }
@@ -148,7 +152,7 @@ func (r Reading) MarshalJSON() ([]byte, error) {
 	}
 	return json.Marshal(readingJSON{Num(r.T), r.State, Num(r.Beat), Num(r.BeatU), Num(r.BeatAbs), Num(r.Error),
 		Num(r.Offset), Num(r.OffsetU), Num(r.CarrierTone), Num(r.LocalTone), Num(r.CarrierDBFS), Num(r.LocalDBFS),
-		Num(r.CarrierCN0), Num(r.LocalCN0), Num(r.SpreadHz), Num(r.Span), Num(r.Phase), r.PhaseRun, f, r.Why})
+		Num(r.CarrierCN0), Num(r.LocalCN0), Num(r.SpreadHz), Num(r.Span), Num(r.Phase), r.PhaseRun, Num(r.InputDBFS), r.Clipped, f, r.Why})
 }
 
 // UnmarshalJSON reads what MarshalJSON wrote.
@@ -159,6 +163,7 @@ func (r *Reading) UnmarshalJSON(b []byte) error {
 	}
 	*r = Reading{float64(j.T), j.State, float64(j.Beat), float64(j.BeatU), float64(j.BeatAbs), float64(j.Error),
 		float64(j.Offset), float64(j.OffsetU), float64(j.CarrierTone), float64(j.LocalTone), float64(j.CarrierDBFS), float64(j.LocalDBFS),
-		float64(j.CarrierCN0), float64(j.LocalCN0), float64(j.SpreadHz), float64(j.Span), float64(j.Phase), j.PhaseRun, j.Flags, j.Why}
+		float64(j.CarrierCN0), float64(j.LocalCN0), float64(j.SpreadHz), float64(j.Span), float64(j.Phase), j.PhaseRun,
+		float64(j.InputDBFS), j.Clipped, j.Flags, j.Why}
 	return nil
 }
