@@ -1,0 +1,299 @@
+package dsp
+
+import (
+	"fmt"
+	"math"
+)
+
+const (
+	maxSpan  = 8.0  // the longest window a slow beat is given, s
+	cycles   = 3.0  // how many cycles of the beat a window must hold where an offset or an image lies beside it
+	slowBand = 20.0 // beats below this are looked for in the band around 0 Hz, Hz
+)
+
+// single holds the one tone of a mixer's or of a quadrature input: the beat
+// itself, beside the input's own offset and, for real input, its image.
+type single struct {
+	cfg  *Config
+	plan *plan
+	raw  *raw
+	acq  *acquirer
+	slow *acquirer
+	lens *lens
+	gl   *lens
+
+	zero    *band // around 0 Hz, always there
+	tone    *band // where the tone is: zero, or a band of its own
+	t       track
+	count   phaseCount
+	from    float64 // sound before this is of no use: a gap, or a jump
+	x, q    []float32
+	tooSlow bool
+}
+
+func newSingle(cfg *Config, p *plan, r *raw) *single {
+	iq := cfg.Hookup == Quadrature
+	s := &single{cfg: cfg, plan: p, raw: r, lens: newLens(p, iq), gl: newLens(p, iq),
+		acq: newAcquirer(cfg.Rate, cfg.SearchLow, cfg.SearchHigh, iq)}
+	s.zero = newBand(p, 0, iq, 0, int((maxSpan+3)*p.outRate()))
+	lo, n := 0.0, 64
+	if iq {
+		lo = -slowBand
+	}
+	for float64(n) < maxSpan*p.outRate() {
+		n *= 2
+	}
+	s.slow = newAcquirerN(p.outRate(), lo, min(slowBand, 0.45*p.outRate()), iq, n)
+	return s
+}
+
+func (s *single) push(x, q []float32) {
+	s.zero.push(x, q)
+	if s.tone != nil && s.tone != s.zero {
+		s.tone.push(x, q)
+	}
+}
+
+func (s *single) gap(next int64) {
+	s.zero.restart(next)
+	if s.tone != nil && s.tone != s.zero {
+		s.tone.restart(next)
+	}
+	s.from = float64(next) / s.cfg.Rate
+	s.count.broken()
+}
+
+// span returns the window for a beat of f Hz, or 0 when none would do.
+func (s *single) span(f float64) float64 {
+	need := max(1, 24/s.plan.outRate())
+	if s.tone == s.zero {
+		need = max(need, cycles/max(math.Abs(f), 1e-9))
+	}
+	for t := 1.0; t <= maxSpan; t *= 2 {
+		if t >= need*0.999 {
+			return t
+		}
+	}
+	return 0
+}
+
+func (s *single) second(i int64) Reading {
+	end := float64(i + 1)
+	jumped := false
+	if s.t.live && !s.hold(end) {
+		s.t = track{}
+		s.count.broken()
+		s.from = max(s.from, end-1)
+		jumped = true
+	}
+	if !s.t.live {
+		s.begin(end)
+		jumped = jumped && s.t.live
+	}
+	r := s.reading(float64(i) + 0.5)
+	if jumped {
+		r.flag(Retuned)
+	}
+	return r
+}
+
+// hold follows the tone through the second that ends at end.
+func (s *single) hold(end float64) bool {
+	f := s.t.predict(end - 0.5)
+	span := s.span(f)
+	if span == 0 {
+		s.tooSlow = true
+		return false
+	}
+	if end-span < s.from-0.01 { // not enough sound since the gap: wait
+		if end-s.from > maxSpan {
+			return false
+		}
+		s.t.whole = false
+		return true
+	}
+	return s.look(end-span/2, span, f)
+}
+
+// look fits the tone near f in the window and takes it up.
+func (s *single) look(mid, span, f float64) bool {
+	l := s.lens
+	l.open(s.tone, mid, span, min(edge, span/2))
+	if l.valid < 0.9 {
+		s.t.whole = false
+		return s.t.live
+	}
+	l.add(f-s.tone.centre, s.t.c)
+	if s.tone == s.zero && math.Abs(f) < slowBand {
+		l.lines = append(l.lines, line{f: -s.tone.centre, ghost: true})
+	}
+	ok := l.solve(s.tone, true)
+	l.lines = l.lines[:1]
+	if !ok || math.Abs(l.lines[0].f+s.tone.centre-f) > 2/span {
+		return false
+	}
+	if !s.cfg.signed() && l.lines[0].f+s.tone.centre < 0 {
+		return false
+	}
+	l.take(&s.t, s.tone, mid, 0)
+	return s.t.tail
+}
+
+// signed reports whether the input tells the sign of the beat by itself.
+func (c *Config) signed() bool { return c.Hookup == Quadrature }
+
+// begin searches for the strongest tone.
+func (s *single) begin(end float64) {
+	x, q := s.raw.tail(int64(math.Ceil((end+edge)*s.cfg.Rate)), s.acq.n)
+	best := found{}
+	bin := s.cfg.Rate / float64(s.acq.n)
+	for _, l := range s.acq.search(x, q) {
+		if math.Abs(l.f) > 3.5*bin {
+			best = l
+			break
+		}
+	}
+	s.tooSlow = false
+	if l := s.beginSlow(end); l.amp > best.amp {
+		best = l
+	}
+	if best.amp == 0 {
+		return
+	}
+	s.tone = s.zero
+	if math.Abs(best.f) > 0.8*s.plan.half && s.plan.d1*s.plan.d2 > 1 {
+		s.tone = newBand(s.plan, best.f, s.cfg.Hookup == Quadrature, s.raw.first(), int((maxSpan+3)*s.plan.outRate()))
+		s.raw.prime(s.tone)
+	}
+	span := s.span(best.f)
+	if span == 0 {
+		s.tooSlow = true
+		return
+	}
+	s.t = track{}
+	if end-span < s.from-0.01 || !s.look(end-span/2, span, best.f) || !s.t.whole {
+		s.t = track{}
+	}
+}
+
+// beginSlow searches the band around 0 Hz.
+func (s *single) beginSlow(end float64) found {
+	l := s.lens
+	n := s.slow.n
+	span := min(float64(n)/s.plan.outRate(), maxSpan)
+	if end-span < s.from {
+		return found{}
+	}
+	l.open(s.zero, end-span/2, span, 0)
+	if l.valid < 0.99 {
+		return found{}
+	}
+	s.x, s.q = resize(s.x, n), resize(s.q, n)
+	for i := range s.x {
+		s.x[i], s.q[i] = 0, 0
+	}
+	// A stretch shorter than the transform is laid in its middle of zeros,
+	// without its mean, under the transform's own window.
+	var mean complex128
+	for _, z := range l.win.z {
+		mean += z / complex(float64(len(l.win.z)), 0)
+	}
+	off := max(0, (n-len(l.win.z))/2)
+	for i, z := range l.win.z {
+		if off+i < n {
+			s.x[off+i], s.q[off+i] = float32(real(z-mean)), float32(imag(z-mean))
+		}
+	}
+	bin := s.plan.outRate() / float64(n)
+	for _, f := range s.slow.search(s.x, s.q) {
+		if math.Abs(f.f) > 3.5*bin {
+			if s.cfg.Hookup != Quadrature {
+				f.amp /= 2 // the band has doubled real input already
+			}
+			return f
+		}
+	}
+	return found{}
+}
+
+// reading says what the last second said. The level and C/N0 of the beat note
+// stand in the carrier's columns: that is whose strength they follow.
+func (s *single) reading(t float64) Reading {
+	r := Blank(t, Searching)
+	r.PhaseRun = s.count.run
+	r.Why = "no tone stands out of the noise"
+	if s.tooSlow {
+		r.State = Merged
+		r.Why = fmt.Sprintf("the beat is slower than %.2g Hz: a longer span is needed", cycles/maxSpan)
+		return r
+	}
+	if !s.t.live {
+		return r
+	}
+	r.State = Apart
+	scale := 1 + s.cfg.SampleRateError
+	r.CarrierDBFS = 20 * math.Log10(s.t.amp)
+	r.CarrierCN0 = 10 * math.Log10(s.t.cn0())
+	if !s.t.whole {
+		r.Why = "the beat was not there, or jumped, within the span"
+		return r
+	}
+	sign := s.cfg.sign()
+	d0 := s.cfg.SetOff()
+	f := s.t.f
+	r.BeatAbs, r.BeatU, r.Span = math.Abs(f)*scale, s.t.uf*scale, 2*s.lens.win.half
+	known := s.cfg.signed()
+	if !known {
+		sign = 1
+		r.Why = "one tone at the size of the beat: this hook-up has no sign"
+		if math.Abs(d0) >= 1 && math.Abs(math.Abs(f)-math.Abs(d0)) < 0.5*math.Abs(d0) {
+			known, sign = true, math.Copysign(1, d0)
+			r.Why = "sign from the set-off"
+		}
+	}
+	dt := t - s.t.at
+	r.Phase = s.count.next(t, sign*(s.t.phase+f*dt+s.t.c*dt*dt/2), sign*(f+s.t.c*dt), s.t.uf)
+	r.PhaseRun = s.count.run
+	if known {
+		r.Beat = sign * f * scale
+		r.Error = r.Beat - d0
+		r.Offset = r.Error / s.cfg.Local
+		r.OffsetU = r.BeatU / s.cfg.Local
+	}
+	return r
+}
+
+func (s *single) glimpse(from, upto float64, g *Glimpse) {
+	if !s.t.live {
+		return
+	}
+	g.State = Apart
+	span := max(upto-from, min(maxSpan, cycles/max(math.Abs(s.t.f), 1e-9)), 24/s.plan.outRate())
+	if s.tone != s.zero {
+		span = upto - from
+	}
+	if upto-span < s.from {
+		return
+	}
+	mid := upto - span/2
+	l := s.gl
+	l.open(s.tone, mid, span, 0)
+	l.add(s.t.predict(mid)-s.tone.centre, 0)
+	if s.tone == s.zero && math.Abs(s.t.f) < slowBand {
+		l.lines = append(l.lines, line{f: -s.tone.centre, ghost: true})
+	}
+	if l.valid < 0.95 || !l.solve(s.tone, false) {
+		return
+	}
+	x := &l.lines[0]
+	if r := math.Hypot(real(x.a), imag(x.a)) / s.tone.gain(x.f) / s.t.amp; r < 0.3 || r > 3 {
+		return
+	}
+	f := (x.f + s.tone.centre) * (1 + s.cfg.SampleRateError) * s.cfg.sign()
+	g.T, g.BeatAbs, g.BeatU = mid, math.Abs(f), x.uf*math.Sqrt(s.t.noise)
+	if s.cfg.signed() {
+		g.Beat = f
+	}
+	ph := s.cfg.sign() * (cphase(x.a) + s.tone.oscillator(mid) + (x.f+s.tone.centre)*(upto-mid))
+	g.Turn = ph - math.Floor(ph)
+}

@@ -1,0 +1,244 @@
+package dsp
+
+import (
+	"math"
+	"math/cmplx"
+)
+
+// track is one tone as it is held from second to second. Frequencies are in
+// the audio, by the nominal sample clock.
+type track struct {
+	live  bool
+	band  *band
+	f     float64 // Hz, at the middle of the last window
+	c     float64 // Hz/s
+	at    float64 // time of that middle, s
+	amp   float64 // full scale 1
+	phase float64 // turns modulo 1, at the middle
+	uf    float64 // standard uncertainty of f, Hz
+	noise float64 // density around it, full scale^2 per Hz, smoothed over some seconds
+	whole bool    // there from end to end of the last window, in one piece
+	tail  bool    // there at the end of the last window
+	seen  int     // windows in a row that showed it
+}
+
+// cn0 returns the tone's C/N0 as a ratio, Hz.
+func (t *track) cn0() float64 { return t.amp * t.amp / t.noise }
+
+// predict returns where the tone is expected at time at.
+func (t *track) predict(at float64) float64 {
+	dt := at - t.at
+	if math.Abs(dt) > 3 {
+		return t.f
+	}
+	return t.f + t.c*dt
+}
+
+// lens looks at a band through one window: it owns the scratch space for the
+// window, its lines and its spectra, and is reused from second to second.
+type lens struct {
+	plan    *plan
+	complex bool
+	win     window
+	fit     fitter
+	spec    *spectrum
+	lines   []line
+	demod   []complex128
+	amps    []float64
+	avoid   []float64
+	diffU   float64 // standard uncertainty of the difference of the first two lines for noise of density 1, Hz
+	valid   float64 // share of the window's weight that rests on real samples
+}
+
+func newLens(p *plan, isComplex bool) *lens {
+	return &lens{plan: p, complex: isComplex, spec: newSpectrum(p.outRate()), lines: make([]line, 0, maxLines)}
+}
+
+// open loads the window of nominal length span centred on mid (s) from b. Its
+// edges taper as half a cosine over 2*taper, so that programme sidebands a
+// hundred hertz away do not leak into the frequency while nearly nothing of
+// the bound is given away.
+func (l *lens) open(b *band, mid, span, taper float64) {
+	rate := b.rate
+	half := span / 2
+	from := int64(math.Ceil((mid - half - taper) * rate))
+	to := int64(math.Floor((mid + half + taper) * rate))
+	k0, z, ok := b.window(from, to, l.win.z, l.win.ok)
+	l.win.z, l.win.ok = z, ok
+	l.win.dt = 1 / b.outRate()
+	l.win.t0 = float64(b.sampleOf(k0))/rate - mid
+	l.win.half = half
+	l.win.w = resize(l.win.w, len(z))
+	sum, all := 0.0, 0.0
+	for i := range z {
+		t := math.Abs(l.win.t0 + float64(i)*l.win.dt)
+		w := 1.0
+		if taper > 0 && t > half-taper {
+			w = 0.5 - 0.5*math.Sin(math.Pi/2*min(1, (t-half)/taper))
+		}
+		all += w
+		if !ok[i] {
+			w = 0
+		}
+		l.win.w[i] = w
+		sum += w
+	}
+	l.win.used = sum * l.win.dt
+	l.valid = sum / max(all, 1e-9)
+	l.lines = l.lines[:0]
+}
+
+// add appends a line at band frequency f and returns its index.
+func (l *lens) add(f, c float64) int {
+	l.lines = append(l.lines, line{f: f, c: c})
+	return len(l.lines) - 1
+}
+
+// solve fits the lines present, first their amplitudes, then their
+// frequencies, then (if chirps) their chirps. Real input near 0 Hz has each
+// tone's image beside it: those enter as nuisances.
+func (l *lens) solve(b *band, chirps bool) bool {
+	n := len(l.lines)
+	l.addImages(b, n)
+	defer func() { l.lines = l.lines[:n] }()
+	if !l.fit.run(&l.win, l.lines, 0, 1, -b.centre) || !l.fit.run(&l.win, l.lines, 1, 4, -b.centre) {
+		return false
+	}
+	order := 1
+	if chirps {
+		order = 2
+		if !l.fit.run(&l.win, l.lines, 2, 5, -b.centre) {
+			return false
+		}
+	}
+	l.diffU = l.fit.uncertainty(&l.win, l.lines, order)
+	l.fit.accumulate(&l.win, l.lines, order) // the residual at the solution
+	return true
+}
+
+func (l *lens) addImages(b *band, n int) {
+	if l.complex {
+		return
+	}
+	reach := b.half
+	if b.d1*b.d2 == 1 {
+		reach = b.rate
+	}
+	for k := range n {
+		im := -2*b.centre - l.lines[k].f
+		if math.Abs(im) < reach && len(l.lines) < maxLines && math.Abs(im-l.lines[k].f)*l.win.half > 0.5 {
+			l.lines = append(l.lines, line{f: im, ghost: true, image: k + 1})
+		}
+	}
+}
+
+// frequencies of the lines present, for masking.
+func (l *lens) freqs(dst []float64) []float64 {
+	for _, x := range l.lines {
+		dst = append(dst, x.f)
+	}
+	return dst
+}
+
+// take moves track t to line ln, as fitted in the window around mid: its
+// frequency, level, phase, the noise about it, and whether it was there from
+// end to end.
+func (l *lens) take(t *track, b *band, mid float64, ln int) {
+	x := &l.lines[ln]
+	gain := b.gain(x.f)
+	l.avoid = l.freqs(l.avoid[:0])
+	l.spec.take(l.fit.r)
+	n0 := l.spec.noise(x.f, 60, b.half, 4, l.avoid)
+	if math.IsNaN(n0) {
+		n0 = l.spec.noise(x.f, b.rate, b.rate, 0, l.avoid)
+	}
+	n0 = max(n0, 1e-18*real(x.a*cmplx.Conj(x.a)), 1e-30)
+	s := n0 / (gain * gain)
+	if !(t.noise > 0) || t.seen == 0 {
+		t.noise, t.seen = s, 0
+	}
+	density := max(n0, t.noise*gain*gain)
+	t.whole, t.tail = l.shape(ln, density)
+	if t.whole { // an average over about ten seconds
+		t.noise += max(0.1, 1/float64(t.seen+1)) * (s - t.noise)
+	}
+	t.f, t.c, t.at = x.f+b.centre, x.c, mid
+	t.amp = cmplx.Abs(x.a) / gain
+	t.phase = cphase(x.a) + b.oscillator(mid)
+	t.band, t.live = b, true
+	if t.tail {
+		t.seen++
+	}
+	t.uf = x.uf * math.Sqrt(max(t.noise*gain*gain, l.spec.beside(x.f, 1.2, 4)))
+}
+
+func allOK(ok []bool) bool {
+	for _, v := range ok {
+		if !v {
+			return false
+		}
+	}
+	return true
+}
+
+// shape looks at line k block by block: Goertzel's filter at the line's own
+// frequency over tenths of a second of (residual + line) gives amplitude and
+// phase against the fit. whole: there in every block but stray ones, and in
+// phase with the fit; tail: there in the last blocks.
+func (l *lens) shape(k int, density float64) (whole, tail bool) {
+	ln := &l.lines[k]
+	a2 := real(ln.a)*real(ln.a) + imag(ln.a)*imag(ln.a)
+	block := 0.1
+	for block < 0.5 && a2*block < 30*density {
+		block += 0.1
+	}
+	per := max(2, int(block/l.win.dt))
+	blocks := len(l.win.z) / per
+	if blocks < 3 {
+		return a2*l.win.used > 20*density, true
+	}
+	l.demod = resize(l.demod, per)
+	noise := density / (float64(per) * l.win.dt)
+	most := 0.0
+	amps := l.amps[:0]
+	turned := 0.0
+	off := len(l.win.z) - blocks*per
+	for i := range blocks {
+		at := off + i*per
+		if !allOK(l.win.ok[at : at+per]) {
+			continue
+		}
+		mid := l.win.t0 + (float64(at)+float64(per-1)/2)*l.win.dt
+		for j := range per {
+			t := l.win.t0 + float64(at+j)*l.win.dt
+			model := ln.a * complex(1+ln.g*t, 0) * cmplx.Rect(1, 2*math.Pi*ln.f*t+math.Pi*ln.c*t*t)
+			l.demod[j] = l.fit.r[at+j] + model
+		}
+		f := ln.f + ln.c*mid
+		g := goertzel(l.demod, 2*math.Pi*f*l.win.dt) / complex(float64(per), 0)
+		// model phase at the block's start, by the local frequency through its middle
+		ph := 2*math.Pi*ln.f*mid + math.Pi*ln.c*mid*mid - 2*math.Pi*f*float64(per-1)/2*l.win.dt
+		p := real(g)*real(g) + imag(g)*imag(g)
+		if p > 6*noise && p > 0.1*a2 {
+			d := math.Abs(cmplx.Phase(g * cmplx.Conj(ln.a) * cmplx.Rect(1, -ph)))
+			turned = max(turned, d-4*math.Sqrt(noise/p/2))
+		}
+		amps = append(amps, p)
+		most = max(most, p)
+	}
+	l.amps = amps
+	blocks = len(amps)
+	bad, lastBad := 0, 0
+	for _, p := range amps {
+		if p < max(0.12*most, 4*noise) {
+			bad++
+			lastBad++
+		} else {
+			lastBad = 0
+		}
+	}
+	present := a2*l.win.used > 16*density
+	tail = present && float64(lastBad)*float64(per)*l.win.dt < 0.25
+	whole = present && bad*6 <= blocks && turned < 0.6 && lastBad < 2
+	return whole, tail
+}

@@ -1,0 +1,350 @@
+package dsp
+
+import (
+	"math"
+	"math/cmplx"
+)
+
+const (
+	// Two tones closer than this are not told apart in a second: at 1.5 cycles
+	// of difference the joint bound is still within 1.23 of the single one in
+	// the worst phase, at 1.0 it is 2.5 times that (facts of the two-tone
+	// information matrix). New tones have to be further apart to be taken up.
+	holdApart = 1.6
+	takeApart = 2.0
+	pull      = 140.0 // how far a beat may lie from its set-off when nothing was told of the tones, Hz
+	loud      = 100.0 // C/N0, Hz, above which one second is proof enough of a tone
+)
+
+// pairMemory is what is remembered of the two tones once they were known.
+type pairMemory struct {
+	known          bool
+	at             float64 // s
+	carrier, local float64 // Hz
+	ampC, ampL     float64
+}
+
+// twoTone holds the carrier's tone and the local's.
+type twoTone struct {
+	cfg  *Config
+	plan *plan
+	raw  *raw
+	acq  *acquirer
+	lens *lens
+	gl   *lens
+
+	bands  []*band
+	tr     [2]track
+	asked  bool // the hint has had its say
+	local  int  // index of the local's track, -1: not known
+	merged bool
+	apart  int // seconds in a row that showed two tones while merged
+	jumped bool
+	alone  int // seconds since only one tone has been held
+	memory pairMemory
+	cand   float64 // a possible second tone, Hz, and how often it was seen in a row
+	candN  int
+	count  phaseCount
+	last   int64 // the last second looked at
+	avoid  []float64
+}
+
+func newTwoTone(cfg *Config, p *plan, r *raw) *twoTone {
+	iq := cfg.Hookup == Quadrature
+	return &twoTone{cfg: cfg, plan: p, raw: r, local: -1, last: -1,
+		acq:  newAcquirer(cfg.Rate, cfg.SearchLow, cfg.SearchHigh, iq),
+		lens: newLens(p, iq), gl: newLens(p, iq)}
+}
+
+func (e *twoTone) push(x, q []float32) {
+	for _, b := range e.bands {
+		b.push(x, q)
+	}
+}
+
+func (e *twoTone) gap(next int64) {
+	for _, b := range e.bands {
+		b.restart(next)
+	}
+	e.count.broken()
+}
+
+// held returns how many tones are held.
+func (e *twoTone) held() int {
+	n := 0
+	for i := range e.tr {
+		if e.tr[i].live {
+			n++
+		}
+	}
+	return n
+}
+
+func (e *twoTone) second(i int64) Reading {
+	mid := float64(i) + 0.5
+	e.jumped = false
+	e.last = i
+	if e.held() > 0 {
+		e.follow(mid)
+	}
+	if e.held() == 0 {
+		e.begin(i, mid)
+	} else if e.held() == 1 && !e.merged {
+		if e.alone++; e.alone%5 == 0 || e.wantsFar() {
+			e.lookFar(i, mid)
+		}
+	} else {
+		e.alone = 0
+	}
+	e.identify(mid)
+	return e.reading(mid)
+}
+
+// follow looks at the second around mid with the tones that are held.
+func (e *twoTone) follow(mid float64) {
+	for _, b := range e.bands {
+		l := e.lens
+		l.open(b, mid, 1, edge)
+		if l.valid < 0.3 {
+			e.miss(b)
+			continue
+		}
+		var own [2]int
+		n := 0
+		for k := range e.tr {
+			if t := &e.tr[k]; t.live && t.band == b {
+				own[n] = k
+				n++
+				l.add(t.predict(mid)-b.centre, t.c)
+			}
+		}
+		switch {
+		case n == 2:
+			e.followBoth(b, mid, own)
+		case n == 1:
+			e.followOne(b, mid, own[0])
+		}
+	}
+	e.release()
+}
+
+// followBoth follows two tones in one band.
+func (e *twoTone) followBoth(b *band, mid float64, own [2]int) {
+	l := e.lens
+	if math.Abs(l.lines[0].f-l.lines[1].f) >= holdApart && l.solve(b, true) &&
+		math.Abs(l.lines[0].f-l.lines[1].f) >= holdApart {
+		e.take(b, mid, own[0], 0)
+		e.take(b, mid, own[1], 1)
+		if e.tr[own[0]].whole && e.tr[own[1]].whole {
+			return
+		}
+	}
+	// Something jumped, left, or came too close: look afresh.
+	old := [2]track{e.tr[own[0]], e.tr[own[1]]}
+	want := [2]float64{old[0].predict(mid), old[1].predict(mid)}
+	l.lines = l.lines[:0]
+	switch e.scan(b, 2) {
+	case 2:
+		f0, f1 := l.lines[0].f+b.centre, l.lines[1].f+b.centre
+		swap, sure := match(want, [2]float64{f0, f1})
+		k0, k1 := own[0], own[1]
+		if swap {
+			k0, k1 = k1, k0
+		}
+		e.take(b, mid, k0, 0)
+		e.take(b, mid, k1, 1)
+		if !e.tr[k0].whole || !e.tr[k1].whole {
+			break
+		}
+		e.jumped = true
+		e.count.broken()
+		if !sure {
+			e.local = -1
+		}
+		return
+	case 1:
+		f := l.lines[0].f + b.centre
+		if math.Abs(want[0]-want[1]) < holdApart+0.6 && math.Abs(f-(want[0]+want[1])/2) < 2 {
+			e.merge(b, mid, own)
+			return
+		}
+		k := own[0]
+		if math.Abs(f-want[1]) < math.Abs(f-want[0]) {
+			k = own[1]
+		}
+		e.take(b, mid, k, 0)
+		for j, o := range own {
+			if o != k {
+				e.tr[o] = old[j]
+				e.tr[o].whole, e.tr[o].tail, e.tr[o].seen = false, false, 0
+			}
+		}
+		return
+	}
+	for j, o := range own {
+		tail := e.tr[o].tail
+		e.tr[o] = old[j]
+		e.tr[o].whole, e.tr[o].tail, e.tr[o].seen = false, tail, 0
+	}
+}
+
+// match says how found tones belong to wanted ones: swap when found[0] is
+// want[1]; sure when the answer is beyond doubt: one of the two stayed where
+// it was, or both moved by the same amount.
+func match(want, found [2]float64) (swap, sure bool) {
+	straight := [2]float64{found[0] - want[0], found[1] - want[1]}
+	crossed := [2]float64{found[1] - want[0], found[0] - want[1]}
+	cost := func(d [2]float64) float64 {
+		stay := min(math.Abs(d[0]), math.Abs(d[1]))
+		return min(stay, math.Abs(d[0]-d[1]))
+	}
+	a, b := cost(straight), cost(crossed)
+	if a > b {
+		return true, b < 0.4 && a > 3*b+0.4
+	}
+	return false, a < 0.4 && b > 3*a+0.4
+}
+
+// merge holds both tones as one composite.
+func (e *twoTone) merge(b *band, mid float64, own [2]int) {
+	e.merged, e.apart = true, 0
+	e.count.broken()
+	f := e.lens.lines[0].f + b.centre
+	for _, k := range own {
+		e.tr[k].at, e.tr[k].whole, e.tr[k].tail = mid, false, true
+	}
+	e.tr[own[0]].f, e.tr[own[1]].f = f, f
+	e.tr[own[0]].c, e.tr[own[1]].c = 0, 0
+	e.tr[own[1]].live = false
+	e.tr[own[0]].live = true
+}
+
+// followOne follows the only tone held in a band and looks for another beside
+// it.
+func (e *twoTone) followOne(b *band, mid float64, k int) {
+	l := e.lens
+	t := &e.tr[k]
+	was := *t
+	fitted := l.solve(b, true)
+	if fitted {
+		e.take(b, mid, k, 0)
+	}
+	lost := !fitted || !t.whole
+	if lost {
+		l.lines = l.lines[:0]
+	}
+	need := 2
+	if e.otherBand(b) {
+		need = 1
+	}
+	n := e.scan(b, need)
+	if n == 0 || (n == 1 && !lost) {
+		if n == 0 {
+			*t = was
+			t.whole, t.tail, t.seen = false, false, 0
+		}
+		e.candN, e.apart = 0, 0
+		return
+	}
+	pick, other := 0, 1
+	if lost {
+		want := was.predict(mid)
+		if n == 2 && math.Abs(l.lines[1].f+b.centre-want) < math.Abs(l.lines[0].f+b.centre-want) {
+			pick, other = 1, 0
+		}
+		if f := l.lines[pick].f + b.centre; math.Abs(f-want) > 0.5 && !e.merged {
+			// It moved: the same tone only if it is as loud as before.
+			if a := cmplx.Abs(l.lines[pick].a); a < 0.5*was.amp || a > 2*was.amp {
+				*t = was
+				t.whole, t.tail, t.seen = false, false, 0
+				return
+			}
+			e.jumped = true
+		}
+	}
+	e.take(b, mid, k, pick)
+	if n == 2 {
+		e.sight(b, mid, k, other)
+	}
+}
+
+// otherBand reports whether the second tone lives, or is to live, elsewhere.
+func (e *twoTone) otherBand(b *band) bool { return len(e.bands) > 1 }
+
+// sight counts how often a second tone beside track k was seen in a row, and
+// takes it up when that is enough.
+func (e *twoTone) sight(b *band, mid float64, k, ln int) {
+	f := e.lens.lines[ln].f + b.centre
+	if e.candN > 0 && math.Abs(f-e.cand) > 2 {
+		e.candN = 0
+	}
+	e.cand = f
+	e.candN++
+	o := 1 - k
+	was := e.tr[o]
+	e.tr[o] = track{live: true, band: b}
+	e.take(b, mid, o, ln)
+	t := &e.tr[o]
+	enough := e.candN >= 2 || (!e.merged && t.cn0() > loud)
+	if !t.whole || !e.tr[k].whole || !enough {
+		e.tr[o] = was
+		e.tr[o].live = false
+		return
+	}
+	e.candN = 0
+	if e.merged {
+		e.unmerge(mid, k)
+	}
+}
+
+// unmerge tells which tone is which after they were merged: the carrier is the
+// anchor, for it moves slowly. Where that does not settle it, nobody knows.
+func (e *twoTone) unmerge(mid float64, k int) {
+	e.merged = false
+	e.jumped = true
+	m := &e.memory
+	if !m.known {
+		e.local = -1
+		return
+	}
+	f := [2]float64{e.tr[0].f, e.tr[1].f}
+	sep := math.Abs(f[0] - f[1])
+	d := [2]float64{math.Abs(f[0] - m.carrier), math.Abs(f[1] - m.carrier)}
+	e.local = -1
+	level := func(c int) float64 { // how well the levels fit if c is the carrier, dB
+		return math.Abs(20*math.Log10(e.tr[c].amp/m.ampC)) + math.Abs(20*math.Log10(e.tr[1-c].amp/m.ampL))
+	}
+	for c := range 2 {
+		if d[c] < sep/4 && d[1-c] > sep/2 && level(c) < level(1-c)+3 && mid-m.at < 120 {
+			e.local = 1 - c
+		}
+	}
+}
+
+// take moves track k to line ln of the lens.
+func (e *twoTone) take(b *band, mid float64, k, ln int) { e.lens.take(&e.tr[k], b, mid, ln) }
+
+// release lets go of tones that are no longer there.
+func (e *twoTone) release() {
+	for k := range e.tr {
+		t := &e.tr[k]
+		if t.live && !t.tail {
+			t.live, t.seen = false, 0
+			e.count.broken()
+		}
+	}
+	if e.held() == 0 {
+		e.bands = e.bands[:0]
+		e.merged = false
+		e.candN = 0
+	}
+}
+
+// miss says that band b had too little sound.
+func (e *twoTone) miss(b *band) {
+	for k := range e.tr {
+		if t := &e.tr[k]; t.band == b {
+			t.whole, t.tail = false, false
+		}
+	}
+}
