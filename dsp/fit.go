@@ -257,6 +257,34 @@ func (ft *fitter) update(win *window, lines []line, order int, foldAt float64) f
 	return moved
 }
 
+// bent reports whether the window shows that the chirp of some line is wrong:
+// its correction exceeds four times its uncertainty, the residual taken as
+// noise.
+func (ft *fitter) bent(win *window, lines []line) bool {
+	n := ft.accumulate(win, lines, 2)
+	if !ft.solve(n) {
+		return false
+	}
+	var rr, ww float64
+	for i, r := range ft.r {
+		rr += win.w[i] * (real(r)*real(r) + imag(r)*imag(r))
+		ww += win.w[i]
+	}
+	at := 0
+	for k := range lines {
+		if !lines[k].ghost {
+			ft.unit(at+2, n)
+			a := lines[k].a
+			rho := ft.sol[at+2] / a
+			if imag(rho)*imag(rho) > 16*real(ft.inv[at+2])*rr/ww/2/real(a*cmplx.Conj(a)) {
+				return true
+			}
+		}
+		at += lines[k].cols(2)
+	}
+	return false
+}
+
 // uncertainty fills uf of every line, and returns that of the difference of
 // the first two when there are two (else 0): standard uncertainties in Hz for
 // white noise whose density is 1 per Hz on the scale of |z|^2, from the

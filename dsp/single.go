@@ -230,7 +230,7 @@ func (s *single) reading(t float64) Reading {
 	if !s.t.live {
 		return r
 	}
-	r.State = Apart
+	r.State, r.Why = Apart, ""
 	scale := 1 + s.cfg.SampleRateError
 	r.CarrierDBFS = 20 * math.Log10(s.t.amp)
 	r.CarrierCN0 = 10 * math.Log10(s.t.cn0())

@@ -94,9 +94,11 @@ func (l *lens) add(f, c float64) int {
 	return len(l.lines) - 1
 }
 
-// solve fits the lines present, first their amplitudes, then their
-// frequencies, then (if chirps) their chirps. Real input near 0 Hz has each
-// tone's image beside it: those enter as nuisances.
+// solve fits the lines present: first their amplitudes, then their frequencies
+// with the chirps that were given, and (if chirps) their chirps too where the
+// window shows that those are wrong. A chirp that is fitted for nothing costs
+// half as much again in the phase, though nothing in the frequency. Real input
+// near 0 Hz has each tone's image beside it: those enter as nuisances.
 func (l *lens) solve(b *band, chirps bool) bool {
 	n := len(l.lines)
 	l.addImages(b, n)
@@ -105,14 +107,17 @@ func (l *lens) solve(b *band, chirps bool) bool {
 		return false
 	}
 	order := 1
-	if chirps {
+	if chirps && l.fit.bent(&l.win, l.lines) {
 		order = 2
 		if !l.fit.run(&l.win, l.lines, 2, 5, -b.centre) {
 			return false
 		}
 	}
+	// The residual and the covariance at the solution.
+	if !l.fit.solve(l.fit.accumulate(&l.win, l.lines, order)) {
+		return false
+	}
 	l.diffU = l.fit.uncertainty(&l.win, l.lines, order)
-	l.fit.accumulate(&l.win, l.lines, order) // the residual at the solution
 	return true
 }
 
@@ -162,14 +167,27 @@ func (l *lens) take(t *track, b *band, mid float64, ln int) {
 	if t.whole { // an average over about ten seconds
 		t.noise += max(0.1, 1/float64(t.seen+1)) * (s - t.noise)
 	}
-	t.f, t.c, t.at = x.f+b.centre, x.c, mid
+	f := x.f + b.centre
+	switch { // the chirp to expect next: the fit's where it shows one, else that of the last seconds
+	case x.c != t.c:
+		t.c = x.c
+	case t.seen >= 2 && mid > t.at && mid-t.at < 3:
+		t.c += 0.3 * ((f-t.f)/(mid-t.at) - t.c)
+	}
+	t.f, t.at = f, mid
 	t.amp = cmplx.Abs(x.a) / gain
 	t.phase = cphase(x.a) + b.oscillator(mid)
 	t.band, t.live = b, true
 	if t.tail {
 		t.seen++
 	}
-	t.uf = x.uf * math.Sqrt(max(t.noise*gain*gain, l.spec.beside(x.f, 1.2, 4)))
+	// What the fit leaves beside the line and noise does not explain (fading,
+	// gain control, a jump) counts as noise.
+	local := t.noise * gain * gain
+	if left := l.spec.beside(x.f, 1.2, 4); left > 2*local {
+		local = left
+	}
+	t.uf = x.uf * math.Sqrt(local)
 }
 
 func allOK(ok []bool) bool {
