@@ -2,6 +2,7 @@ package dsp
 
 import (
 	"math"
+	"slices"
 	"sort"
 
 	"github.com/mjibson/go-dsp/fft"
@@ -38,6 +39,7 @@ type acquirer struct {
 	x       []float64
 	z       []complex128
 	p       []float64
+	tmp     []float64
 }
 
 func newAcquirer(rate, lo, hi float64, isComplex bool) *acquirer {
@@ -113,16 +115,14 @@ func (a *acquirer) lines() []found {
 	if k1-k0 < 8 {
 		return nil
 	}
-	sorted := make([]float64, 0, k1-k0+1)
-	for k := k0; k <= k1; k++ {
-		sorted = append(sorted, a.at(k))
-	}
-	sort.Float64s(sorted)
-	floor := max(sorted[len(sorted)/4], 1e-300) // generous: candidates only
 	var out []found
+	floor := 0.0
 	for k := k0; k <= k1; k++ {
+		if (k-k0)%64 == 0 { // a quick look first: most bins are far from being a line
+			floor = max(a.median(k, min(k+63, k1)), 1e-300)
+		}
 		p := a.at(k)
-		if p < 4*floor || p <= a.at(k-1) || p < a.at(k+1) {
+		if p < 8*floor || p <= a.at(k-1) || p < a.at(k+1) {
 			continue
 		}
 		noise := a.background(k, bin)
@@ -145,6 +145,16 @@ func (a *acquirer) lines() []found {
 	}
 	sort.Slice(out, func(i, j int) bool { return out[i].amp > out[j].amp })
 	return a.thin(out, bin)
+}
+
+// median of the power in bins from..to.
+func (a *acquirer) median(from, to int) float64 {
+	a.tmp = a.tmp[:0]
+	for k := from; k <= to; k++ {
+		a.tmp = append(a.tmp, a.at(k))
+	}
+	slices.Sort(a.tmp)
+	return a.tmp[len(a.tmp)/2]
 }
 
 // thin drops what is the skirt of a stronger line or an exact harmonic of one
@@ -176,11 +186,10 @@ next:
 // noise through a narrow filter, and of a tone that began within the window,
 // from passing for lines.
 func (a *acquirer) background(k int, bin float64) float64 {
-	rings := [][2]float64{{2.2, 5}, {5, 20}, {20, 60}}
+	rings := [3][2]float64{{2.2, 5}, {5, 20}, {20, 60}}
 	most := 0.0
-	var v []float64
 	for _, r := range rings {
-		v = v[:0]
+		v := a.tmp[:0]
 		from, to := max(4, int(math.Ceil(r[0]/bin))), max(9, int(r[1]/bin))
 		for d := from; d <= to; d++ {
 			for _, kk := range [2]int{k - d, k + d} {
@@ -193,7 +202,8 @@ func (a *acquirer) background(k int, bin float64) float64 {
 		if len(v) < 6 {
 			continue
 		}
-		sort.Float64s(v)
+		slices.Sort(v)
+		a.tmp = v
 		most = max(most, v[len(v)/2]/math.Ln2)
 	}
 	return most

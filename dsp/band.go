@@ -24,7 +24,10 @@ type plan struct {
 	h2     []float32 // second stage, at rate/d1
 	h2f    []float64
 	half   float64 // usable half-width, Hz
+	gains  []float64
 }
+
+const gainSteps = 512 // of the table of gains, over half the output rate
 
 // newPlan chooses the two decimations for a sample rate: an output rate near
 // bandRate and an intermediate rate of a few kilohertz, where the comb's nulls
@@ -39,8 +42,8 @@ func newPlan(rate float64) *plan {
 			}
 			mid := rate / float64(d1)
 			cost := math.Abs(math.Log(mid / float64(d2) / bandRate))
-			cost += 0.02 * math.Abs(math.Log(mid/3200))
-			if mid < 2400 && d1 > 1 {
+			cost += 0.02 * math.Abs(math.Log(mid/2400))
+			if mid < 2300 && d1 > 1 {
 				cost++
 			}
 			if cost < best {
@@ -67,6 +70,9 @@ func newPlan(rate float64) *plan {
 	for _, v := range p.h2f {
 		p.h2 = append(p.h2, float32(v))
 	}
+	for i := range gainSteps + 1 {
+		p.gains = append(p.gains, p.exactGain(float64(i)*p.outRate()/2/gainSteps))
+	}
 	return p
 }
 
@@ -75,8 +81,19 @@ func (p *plan) outRate() float64 { return p.rate / float64(p.d1*p.d2) }
 // reach is how many input samples a filter output looks to either side.
 func (p *plan) reach() int { return len(p.h1)/2 + p.d1*(len(p.h2)/2) }
 
-// gain returns the amplitude response at an offset from the band's centre, Hz.
+// gain returns the amplitude response at an offset from the band's centre, Hz,
+// interpolated in a table (good to 1e-6 where the response is flat).
 func (p *plan) gain(off float64) float64 {
+	x := math.Abs(off) / p.outRate() * 2 * gainSteps
+	i := int(x)
+	if i >= len(p.gains)-1 {
+		return p.exactGain(off)
+	}
+	return p.gains[i] + (x-float64(i))*(p.gains[i+1]-p.gains[i])
+}
+
+// exactGain is what gain interpolates.
+func (p *plan) exactGain(off float64) float64 {
 	return gainAt(p.h1, off/p.rate) * gainAt(p.h2f, off*float64(p.d1)/p.rate)
 }
 

@@ -145,7 +145,8 @@ type Bench struct {
 	sec   int64 // next second to be read
 	reach int64 // what the filters look ahead, samples
 
-	acc [4]secondLevel // of the latest seconds, by number modulo 4
+	glim Glimpse
+	acc  [4]secondLevel // of the latest seconds, by number modulo 4
 }
 
 // secondLevel is what the raw samples of one second say.
@@ -262,12 +263,11 @@ func (b *Bench) Gap(n int64) {
 
 // due gives what has fallen due when b.n reached the end of a slot.
 func (b *Bench) due() {
-	if b.n < b.slotEnd(b.slot) {
-		return
-	}
-	b.slot++
-	if b.cfg.OnGlimpse != nil {
-		b.glimpse()
+	for b.n >= b.slotEnd(b.slot) {
+		b.slot++
+		if b.cfg.OnGlimpse != nil {
+			b.glimpse()
+		}
 	}
 	for b.n-b.reach >= int64(math.Ceil((float64(b.sec)+1+edge)*b.cfg.Rate)) {
 		b.read()
@@ -341,11 +341,12 @@ func (b *Bench) rawFrom(sec int64) bool {
 // glimpse makes and delivers the quick estimate from the latest sound.
 func (b *Bench) glimpse() {
 	upto := float64(b.n-b.reach) / b.cfg.Rate
-	g := Glimpse{Upto: upto, State: Searching, Beat: math.NaN(), BeatAbs: math.NaN(), BeatU: math.NaN(), Turn: math.NaN(), T: upto}
+	g := &b.glim // kept in the bench: a fresh one would be garbage ten times a second
+	*g = Glimpse{Upto: upto, State: Searching, Beat: math.NaN(), BeatAbs: math.NaN(), BeatU: math.NaN(), Turn: math.NaN(), T: upto}
 	if upto > 0.5 {
-		b.eng.glimpse(upto-0.4, upto, &g)
+		b.eng.glimpse(upto-0.4, upto, g)
 	}
-	b.cfg.OnGlimpse(g)
+	b.cfg.OnGlimpse(*g)
 }
 
 // withoutBeat takes the numbers of the beat back and says why.

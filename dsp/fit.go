@@ -64,7 +64,7 @@ func (ft *fitter) run(win *window, lines []line, order, iters int, foldAt float6
 	for i := range lines {
 		start[i] = lines[i].f
 	}
-	for it := range iters {
+	for range iters {
 		cols := ft.accumulate(win, lines, order)
 		if !ft.solve(cols) {
 			return false
@@ -75,7 +75,7 @@ func (ft *fitter) run(win *window, lines []line, order, iters int, foldAt float6
 				return false
 			}
 		}
-		if it > 0 && moved < 1e-9/win.half {
+		if moved < 1e-4/win.half { // what is left is of the order of its square
 			break
 		}
 	}
@@ -257,14 +257,10 @@ func (ft *fitter) update(win *window, lines []line, order int, foldAt float64) f
 	return moved
 }
 
-// bent reports whether the window shows that the chirp of some line is wrong:
-// its correction exceeds four times its uncertainty, the residual taken as
-// noise.
-func (ft *fitter) bent(win *window, lines []line) bool {
-	n := ft.accumulate(win, lines, 2)
-	if !ft.solve(n) {
-		return false
-	}
+// bent reports whether the step of order 2 just solved shows that the chirp of
+// some line is wrong: its correction exceeds four times its uncertainty, the
+// residual taken as noise.
+func (ft *fitter) bent(win *window, lines []line, n int) bool {
 	var rr, ww float64
 	for i, r := range ft.r {
 		rr += win.w[i] * (real(r)*real(r) + imag(r)*imag(r))

@@ -107,13 +107,22 @@ func (l *lens) solve(b *band, chirps bool) bool {
 		return false
 	}
 	order := 1
-	if chirps && l.fit.bent(&l.win, l.lines) {
+	if chirps {
+		// One more pass gives the residual and the covariance at the solution
+		// together with the chirps' corrections.
 		order = 2
-		if !l.fit.run(&l.win, l.lines, 2, 5, -b.centre) {
+		n := l.fit.accumulate(&l.win, l.lines, order)
+		if !l.fit.solve(n) {
+			return false
+		}
+		if !l.fit.bent(&l.win, l.lines, n) {
+			l.diffU = l.fit.uncertainty(&l.win, l.lines, order)
+			return true
+		}
+		if !l.fit.run(&l.win, l.lines, order, 5, -b.centre) {
 			return false
 		}
 	}
-	// The residual and the covariance at the solution.
 	if !l.fit.solve(l.fit.accumulate(&l.win, l.lines, order)) {
 		return false
 	}
@@ -164,22 +173,26 @@ func (l *lens) take(t *track, b *band, mid float64, ln int) {
 	}
 	density := max(n0, t.noise*gain*gain)
 	t.whole, t.tail = l.shape(ln, density)
+	fresh := !t.live
+	t.band, t.live = b, true
+	if !t.whole && !fresh {
+		return // what it was stays the better guess of what it is
+	}
 	if t.whole { // an average over about ten seconds
 		t.noise += max(0.1, 1/float64(t.seen+1)) * (s - t.noise)
 	}
 	f := x.f + b.centre
 	switch { // the chirp to expect next: the fit's where it shows one, else that of the last seconds
 	case x.c != t.c:
-		t.c = x.c
+		t.c = max(-2, min(2, x.c))
 	case t.seen >= 2 && mid > t.at && mid-t.at < 3:
 		t.c += 0.3 * ((f-t.f)/(mid-t.at) - t.c)
 	}
 	t.f, t.at = f, mid
 	t.amp = cmplx.Abs(x.a) / gain
 	t.phase = cphase(x.a) + b.oscillator(mid)
-	t.band, t.live = b, true
-	if t.tail {
-		t.seen++
+	if t.seen++; !t.whole {
+		t.seen = 0 // its noise was not noise alone: begin the average afresh
 	}
 	// What the fit leaves beside the line and noise does not explain (fading,
 	// gain control, a jump) counts as noise.
@@ -200,15 +213,15 @@ func allOK(ok []bool) bool {
 }
 
 // shape looks at line k block by block: Goertzel's filter at the line's own
-// frequency over tenths of a second of (residual + line) gives amplitude and
-// phase against the fit. whole: there in every block but stray ones, and in
-// phase with the fit; tail: there in the last blocks.
+// frequency over twentieths of a second of (residual + line), or longer ones
+// for a weak line, gives amplitude and phase against the fit. whole: there in
+// every block, and in phase with the fit; tail: there in the last blocks.
 func (l *lens) shape(k int, density float64) (whole, tail bool) {
 	ln := &l.lines[k]
 	a2 := real(ln.a)*real(ln.a) + imag(ln.a)*imag(ln.a)
-	block := 0.1
-	for block < 0.5 && a2*block < 30*density {
-		block += 0.1
+	block := 0.05
+	for block < 0.25 && a2*block < 40*density {
+		block += 0.05
 	}
 	per := max(2, int(block/l.win.dt))
 	blocks := len(l.win.z) / per
@@ -257,6 +270,6 @@ func (l *lens) shape(k int, density float64) (whole, tail bool) {
 	}
 	present := a2*l.win.used > 16*density
 	tail = present && float64(lastBad)*float64(per)*l.win.dt < 0.25
-	whole = present && bad*6 <= blocks && turned < 0.6 && lastBad < 2
+	whole = present && bad == 0 && turned < 0.5 && math.Abs(ln.g)*l.win.half < 0.9
 	return whole, tail
 }

@@ -38,7 +38,7 @@ type twoTone struct {
 	asked  bool // the hint has had its say
 	local  int  // index of the local's track, -1: not known
 	merged bool
-	apart  int // seconds in a row that showed two tones while merged
+	missed int // seconds in a row without any tone while merged
 	jumped bool
 	alone  int // seconds since only one tone has been held
 	memory pairMemory
@@ -121,6 +121,8 @@ func (e *twoTone) follow(mid float64) {
 		switch {
 		case n == 2:
 			e.followBoth(b, mid, own)
+		case n == 1 && e.merged:
+			e.followMerged(b, mid, own[0])
 		case n == 1:
 			e.followOne(b, mid, own[0])
 		}
@@ -142,50 +144,52 @@ func (e *twoTone) followBoth(b *band, mid float64, own [2]int) {
 	// Something jumped, left, or came too close: look afresh.
 	old := [2]track{e.tr[own[0]], e.tr[own[1]]}
 	want := [2]float64{old[0].predict(mid), old[1].predict(mid)}
+	close := math.Min(math.Abs(want[0]-want[1]), math.Abs(old[0].f-old[1].f)) < holdApart+1
 	l.lines = l.lines[:0]
-	switch e.scan(b, 2) {
-	case 2:
-		f0, f1 := l.lines[0].f+b.centre, l.lines[1].f+b.centre
-		swap, sure := match(want, [2]float64{f0, f1})
-		k0, k1 := own[0], own[1]
-		if swap {
-			k0, k1 = k1, k0
-		}
-		e.take(b, mid, k0, 0)
-		e.take(b, mid, k1, 1)
-		if !e.tr[k0].whole || !e.tr[k1].whole {
-			break
-		}
-		e.jumped = true
-		e.count.broken()
-		if !sure {
-			e.local = -1
-		}
+	n := e.scan(b, 2)
+	if n == 2 && e.followJump(b, mid, own, old, want) {
 		return
-	case 1:
-		f := l.lines[0].f + b.centre
-		if math.Abs(want[0]-want[1]) < holdApart+0.6 && math.Abs(f-(want[0]+want[1])/2) < 2 {
-			e.merge(b, mid, own)
-			return
-		}
-		k := own[0]
-		if math.Abs(f-want[1]) < math.Abs(f-want[0]) {
-			k = own[1]
-		}
-		e.take(b, mid, k, 0)
-		for j, o := range own {
-			if o != k {
-				e.tr[o] = old[j]
-				e.tr[o].whole, e.tr[o].tail, e.tr[o].seen = false, false, 0
+	}
+	e.tr[own[0]], e.tr[own[1]] = old[0], old[1]
+	if close && n > 0 {
+		e.merge(mid, own)
+		return
+	}
+	if n == 0 {
+		e.miss(b)
+		return
+	}
+	// One is left, if it lies where one was; otherwise nothing is.
+	e.miss(b)
+	for j, k := range own {
+		for ln := range l.lines {
+			if math.Abs(l.lines[ln].f+b.centre-want[j]) < 0.5 {
+				e.take(b, mid, k, ln)
 			}
 		}
-		return
 	}
-	for j, o := range own {
-		tail := e.tr[o].tail
-		e.tr[o] = old[j]
-		e.tr[o].whole, e.tr[o].tail, e.tr[o].seen = false, tail, 0
+}
+
+// followJump takes up two lines found afresh where both are there from end to
+// end, and reports whether they are.
+func (e *twoTone) followJump(b *band, mid float64, own [2]int, old [2]track, want [2]float64) bool {
+	l := e.lens
+	swap, sure := match(want, [2]float64{l.lines[0].f + b.centre, l.lines[1].f + b.centre})
+	k0, k1 := own[0], own[1]
+	if swap {
+		k0, k1 = k1, k0
 	}
+	e.take(b, mid, k0, 0)
+	e.take(b, mid, k1, 1)
+	if !e.tr[k0].whole || !e.tr[k1].whole {
+		return false
+	}
+	e.jumped = true
+	e.count.broken()
+	if !sure {
+		e.local = -1
+	}
+	return true
 }
 
 // match says how found tones belong to wanted ones: swap when found[0] is
@@ -205,18 +209,44 @@ func match(want, found [2]float64) (swap, sure bool) {
 	return false, a < 0.4 && b > 3*a+0.4
 }
 
-// merge holds both tones as one composite.
-func (e *twoTone) merge(b *band, mid float64, own [2]int) {
-	e.merged, e.apart = true, 0
+// merge holds both tones as one.
+func (e *twoTone) merge(mid float64, own [2]int) {
+	e.merged, e.candN, e.missed = true, 0, 0
 	e.count.broken()
-	f := e.lens.lines[0].f + b.centre
-	for _, k := range own {
-		e.tr[k].at, e.tr[k].whole, e.tr[k].tail = mid, false, true
+	a, b := &e.tr[own[0]], &e.tr[own[1]]
+	a.f, a.c, a.at = (a.f+b.f)/2, 0, mid
+	a.live, a.tail, a.whole = true, true, false
+	b.live = false
+}
+
+// followMerged waits for the tones to come apart again.
+func (e *twoTone) followMerged(b *band, mid float64, k int) {
+	l := e.lens
+	l.lines = l.lines[:0]
+	t := &e.tr[k]
+	was := *t
+	n := e.scan(b, 2)
+	t.tail, t.whole, t.at = true, false, mid
+	if n == 0 || math.Abs(l.lines[0].f+b.centre-was.f) > 6 {
+		if e.missed++; e.missed >= 2 {
+			t.tail = false
+		}
+		e.candN = 0
+		return
 	}
-	e.tr[own[0]].f, e.tr[own[1]].f = f, f
-	e.tr[own[0]].c, e.tr[own[1]].c = 0, 0
-	e.tr[own[1]].live = false
-	e.tr[own[0]].live = true
+	e.missed = 0
+	if n == 2 {
+		e.take(b, mid, k, 0)
+		e.sight(b, mid, k, 1)
+		if !e.merged {
+			return
+		}
+		t.tail, t.live = true, true
+	} else {
+		e.candN = 0
+		t.f = l.lines[0].f + b.centre
+	}
+	t.c, t.at = 0, mid
 }
 
 // followOne follows the only tone held in a band and looks for another beside
@@ -243,7 +273,7 @@ func (e *twoTone) followOne(b *band, mid float64, k int) {
 			*t = was
 			t.whole, t.tail, t.seen = false, false, 0
 		}
-		e.candN, e.apart = 0, 0
+		e.candN = 0
 		return
 	}
 	pick, other := 0, 1
@@ -252,7 +282,7 @@ func (e *twoTone) followOne(b *band, mid float64, k int) {
 		if n == 2 && math.Abs(l.lines[1].f+b.centre-want) < math.Abs(l.lines[0].f+b.centre-want) {
 			pick, other = 1, 0
 		}
-		if f := l.lines[pick].f + b.centre; math.Abs(f-want) > 0.5 && !e.merged {
+		if f := l.lines[pick].f + b.centre; math.Abs(f-want) > 0.5 {
 			// It moved: the same tone only if it is as loud as before.
 			if a := cmplx.Abs(l.lines[pick].a); a < 0.5*was.amp || a > 2*was.amp {
 				*t = was
@@ -260,6 +290,8 @@ func (e *twoTone) followOne(b *band, mid float64, k int) {
 				return
 			}
 			e.jumped = true
+			e.local = -1
+			*t = track{}
 		}
 	}
 	e.take(b, mid, k, pick)

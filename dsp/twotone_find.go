@@ -106,7 +106,7 @@ func (e *twoTone) begin(i int64, mid float64) {
 		e.bands = append(e.bands, b)
 	}
 	e.tr = [2]track{}
-	e.candN = 0
+	e.local, e.candN = -1, 0
 	for k, b := range e.bands {
 		l := e.lens
 		l.open(b, mid, 1, edge)

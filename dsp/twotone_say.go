@@ -16,7 +16,7 @@ func (e *twoTone) identify(mid float64) {
 		if e.local < 0 {
 			e.local = e.whichIsLocal(mid)
 		}
-		if e.local >= 0 {
+		if e.local >= 0 && math.Hypot(a.uf, b.uf) < 0.1 {
 			c, l := &e.tr[1-e.local], &e.tr[e.local]
 			e.memory = pairMemory{known: true, at: mid, carrier: c.f, local: l.f, ampC: c.amp, ampL: l.amp}
 		}
