@@ -163,6 +163,9 @@ func (a *acquirer) thin(in []found, bin float64) []found {
 	var out []found
 next:
 	for _, l := range in {
+		if l.amp < 3e-5*in[0].amp {
+			break // the window's own sidelobes
+		}
 		for _, s := range out {
 			if math.Abs(l.f-s.f) < 4.5*bin && l.amp < 0.5*s.amp {
 				continue next

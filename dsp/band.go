@@ -118,7 +118,6 @@ type band struct {
 	inAt   int64 // input index of in[0][0]
 	mid    [2][]float32
 	midAt  int64 // index of mid[0][0] at the intermediate rate
-	midOK  int64 // first intermediate sample free of what went before the start or the last gap
 	rot    complex128
 	rotInc complex128
 	next1  int64 // next intermediate sample to be made
@@ -181,8 +180,7 @@ func (b *band) restart(start int64) {
 	c2, d2 := int64(len(b.h2)/2), int64(b.d2)
 	b.in[0], b.in[1] = b.in[0][:0], b.in[1][:0]
 	b.next1 = ceilDiv(start+c1, d1)
-	b.inAt = start
-	b.midOK = b.next1
+	b.inAt, b.rot = start, 0
 	b.mid[0], b.mid[1] = b.mid[0][:0], b.mid[1][:0]
 	b.midAt = b.next1
 	to := ceilDiv(b.next1+c2, d2)
@@ -214,12 +212,10 @@ func (b *band) push(x, q []float32) {
 	var dot blas.Implementation
 	c1, n1 := int64(len(b.h1)/2), len(b.h1)
 	from := int(b.next1*int64(b.d1) - c1 - b.inAt)
-	fresh := 0
 	for ; from+n1 <= len(b.in[0]); from += b.d1 {
-		if fresh&63 == 0 {
+		if b.next1&63 == 0 || b.rot == 0 { // the recursion is set right now and then
 			b.rot = cmplx.Rect(1, -2*math.Pi*b.phaseAt(b.next1*int64(b.d1)))
 		}
-		fresh++
 		w := b.in[0][from : from+n1]
 		yi, yq := float64(dot.Sdot(n1, b.hi, 1, w, 1)), float64(dot.Sdot(n1, b.hq, 1, w, 1))
 		if b.complex {

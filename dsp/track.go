@@ -258,7 +258,6 @@ func (l *lens) shape(k int, density float64) (whole, tail bool) {
 		most = max(most, p)
 	}
 	l.amps = amps
-	blocks = len(amps)
 	bad, lastBad := 0, 0
 	for _, p := range amps {
 		if p < max(0.12*most, 4*noise) {
