@@ -103,7 +103,7 @@ type Source interface {
 }
 
 // MaxBlock is the greatest number of samples per channel in one Block.
-const MaxBlock = 16384
+const MaxBlock = 65536
 
 // ErrNoSupport is returned when this build cannot open a kind of input.
 var ErrNoSupport = errors.New("this build has no sound-card support: rebuild with `make build` (needs PortAudio's headers) or feed samples through a pipe: `… | offbeat measure --format s16le --rate 48000 -`")

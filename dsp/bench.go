@@ -226,22 +226,31 @@ func (b *Bench) levelOf(sec int64) *secondLevel {
 
 // measure adds the level and the clipped samples of x.
 func measure(l *secondLevel, x []float32) {
-	const full = 0x3f7ff800 // float32 bits of 0.99988: the top step of 14 bits
-	clipped := 0
+	const (
+		full = 0x3f7ff800 // float32 bits of 0.99988: the top step of 14 bits
+		top  = 1 << 31
+	)
 	for len(x) > 0 {
-		n := min(len(x), 64)
-		sum := dotSelf(x[:n])
+		part := x[:min(len(x), 128)]
+		x = x[len(part):]
+		sum := dotSelf(part)
 		l.sum2 += sum
-		if sum > 0.99 { // only then can one of them be at full scale
-			for _, v := range x[:n] {
-				if math.Float32bits(v)&0x7fffffff >= full {
-					clipped++
-				}
+		if sum < 0.99 {
+			continue // then none of them can be at full scale
+		}
+		any := uint32(0) // the top bit tells whether one is
+		for _, v := range part {
+			any |= math.Float32bits(v)&^top + (top - full)
+		}
+		if any&top == 0 {
+			continue
+		}
+		for _, v := range part {
+			if math.Float32bits(v)&^top >= full {
+				l.clipped++
 			}
 		}
-		x = x[n:]
 	}
-	l.clipped += clipped
 }
 
 // Gap says that n samples are missing after those given so far. Every second

@@ -94,7 +94,7 @@ func TestOneReadingASecond(t *testing.T) {
 				a, b := first[i], second[i]
 				same := a.State == b.State && math.Abs(a.InputDBFS-b.InputDBFS) < 1e-6 && a.PhaseRun == b.PhaseRun &&
 					math.IsNaN(a.Beat) == math.IsNaN(b.Beat) && math.IsNaN(a.BeatAbs) == math.IsNaN(b.BeatAbs) &&
-					!(math.Abs(a.BeatAbs-b.BeatAbs) > 1e-9) && !(math.Abs(a.Phase-b.Phase) > 1e-9) && a.Has(Retuned) == b.Has(Retuned)
+					!(math.Abs(a.BeatAbs-b.BeatAbs) > 1e-6) && !(math.Abs(a.Phase-b.Phase) > 1e-6) && a.Has(Retuned) == b.Has(Retuned)
 				if !same {
 					t.Fatalf("%g Hz %s: block sizes matter:\n%s\n%s", rate, h, describe(first[i]), describe(second[i]))
 				}

@@ -3,6 +3,7 @@ package dsp
 import (
 	"encoding/json"
 	"math"
+	"strconv"
 )
 
 // State says what a reading knows of the two tones.
@@ -145,14 +146,57 @@ type readingJSON struct {
 }
 
 // MarshalJSON writes the reading by the fixed contract of the command.
-func (r Reading) MarshalJSON() ([]byte, error) {
-	f := r.Flags
-	if f == nil {
-		f = []Flag{}
+func (r Reading) MarshalJSON() ([]byte, error) { return r.AppendJSON(nil), nil }
+
+// AppendJSON appends what MarshalJSON writes to dst: a reading a second for
+// months is worth not going through reflection.
+func (r *Reading) AppendJSON(dst []byte) []byte {
+	num := func(key string, v float64) {
+		dst = append(dst, key...)
+		if math.IsNaN(v) || math.IsInf(v, 0) {
+			dst = append(dst, "null"...)
+			return
+		}
+		dst = strconv.AppendFloat(dst, v, 'g', -1, 64)
 	}
-	return json.Marshal(readingJSON{Num(r.T), r.State, Num(r.Beat), Num(r.BeatU), Num(r.BeatAbs), Num(r.Error),
-		Num(r.Offset), Num(r.OffsetU), Num(r.CarrierTone), Num(r.LocalTone), Num(r.CarrierDBFS), Num(r.LocalDBFS),
-		Num(r.CarrierCN0), Num(r.LocalCN0), Num(r.SpreadHz), Num(r.Span), Num(r.Phase), r.PhaseRun, Num(r.InputDBFS), r.Clipped, f, r.Why})
+	num(`{"t":`, r.T)
+	dst = append(dst, `,"state":"`...)
+	dst = append(dst, r.State...)
+	num(`","beat_hz":`, r.Beat)
+	num(`,"beat_u_hz":`, r.BeatU)
+	num(`,"beat_abs_hz":`, r.BeatAbs)
+	num(`,"error_hz":`, r.Error)
+	num(`,"offset":`, r.Offset)
+	num(`,"offset_u":`, r.OffsetU)
+	num(`,"carrier_tone_hz":`, r.CarrierTone)
+	num(`,"local_tone_hz":`, r.LocalTone)
+	num(`,"carrier_dbfs":`, r.CarrierDBFS)
+	num(`,"local_dbfs":`, r.LocalDBFS)
+	num(`,"carrier_cn0_dbhz":`, r.CarrierCN0)
+	num(`,"local_cn0_dbhz":`, r.LocalCN0)
+	num(`,"spread_hz":`, r.SpreadHz)
+	num(`,"span_s":`, r.Span)
+	num(`,"phase_cycles":`, r.Phase)
+	dst = append(dst, `,"phase_run":`...)
+	dst = strconv.AppendInt(dst, int64(r.PhaseRun), 10)
+	num(`,"input_dbfs":`, r.InputDBFS)
+	dst = append(dst, `,"clipped_samples":`...)
+	dst = strconv.AppendInt(dst, int64(r.Clipped), 10)
+	dst = append(dst, `,"flags":[`...)
+	for i, f := range r.Flags {
+		if i > 0 {
+			dst = append(dst, ',')
+		}
+		dst = append(dst, '"')
+		dst = append(dst, f...)
+		dst = append(dst, '"')
+	}
+	dst = append(dst, ']')
+	if r.Why != "" {
+		dst = append(dst, `,"why":`...)
+		dst = strconv.AppendQuote(dst, r.Why) // plain ASCII text of this package
+	}
+	return append(dst, '}')
 }
 
 // UnmarshalJSON reads what MarshalJSON wrote.

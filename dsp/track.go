@@ -46,6 +46,10 @@ type lens struct {
 	demod   []complex128
 	amps    []float64
 	avoid   []float64
+	solved  int     // counts the fits
+	specOf  int     // the fit whose residual spec holds
+	near    float64 // where noise was last asked for in it, and what it was
+	noise   float64
 	diffU   float64 // standard uncertainty of the difference of the first two lines for noise of density 1, Hz
 	valid   float64 // share of the window's weight that rests on real samples
 }
@@ -100,6 +104,7 @@ func (l *lens) add(f, c float64) int {
 // half as much again in the phase, though nothing in the frequency. Real input
 // near 0 Hz has each tone's image beside it: those enter as nuisances.
 func (l *lens) solve(b *band, chirps bool) bool {
+	l.solved++
 	n := len(l.lines)
 	l.addImages(b, n)
 	defer func() { l.lines = l.lines[:n] }()
@@ -154,6 +159,20 @@ func (l *lens) freqs(dst []float64) []float64 {
 	return dst
 }
 
+// noiseFor returns the density of the noise around band frequency f in the
+// residual; lines close to each other share it.
+func (l *lens) noiseFor(b *band, f float64) float64 {
+	if math.Abs(f-l.near) < 15 {
+		return l.noise
+	}
+	l.near = f
+	l.noise = l.spec.noise(f, 60, b.half, 4, l.avoid)
+	if math.IsNaN(l.noise) {
+		l.noise = l.spec.noise(f, b.rate, b.rate, 0, l.avoid)
+	}
+	return l.noise
+}
+
 // take moves track t to line ln, as fitted in the window around mid: its
 // frequency, level, phase, the noise about it, and whether it was there from
 // end to end.
@@ -161,11 +180,11 @@ func (l *lens) take(t *track, b *band, mid float64, ln int) {
 	x := &l.lines[ln]
 	gain := b.gain(x.f)
 	l.avoid = l.freqs(l.avoid[:0])
-	l.spec.take(l.fit.r)
-	n0 := l.spec.noise(x.f, 60, b.half, 4, l.avoid)
-	if math.IsNaN(n0) {
-		n0 = l.spec.noise(x.f, b.rate, b.rate, 0, l.avoid)
+	if l.specOf != l.solved { // once for both lines of a fit
+		l.spec.take(l.fit.r)
+		l.specOf, l.near = l.solved, math.Inf(1)
 	}
+	n0 := l.noiseFor(b, x.f)
 	n0 = max(n0, 1e-18*real(x.a*cmplx.Conj(x.a)), 1e-30)
 	s := n0 / (gain * gain)
 	if !(t.noise > 0) || t.seen == 0 {
@@ -240,10 +259,14 @@ func (l *lens) shape(k int, density float64) (whole, tail bool) {
 			continue
 		}
 		mid := l.win.t0 + (float64(at)+float64(per-1)/2)*l.win.dt
+		t := l.win.t0 + float64(at)*l.win.dt
+		e := ln.a * cmplx.Rect(1, 2*math.Pi*ln.f*t+math.Pi*ln.c*t*t)
+		q := cmplx.Rect(1, 2*math.Pi*ln.f*l.win.dt+math.Pi*ln.c*l.win.dt*(2*t+l.win.dt))
+		qq := cmplx.Rect(1, 2*math.Pi*ln.c*l.win.dt*l.win.dt)
 		for j := range per {
-			t := l.win.t0 + float64(at+j)*l.win.dt
-			model := ln.a * complex(1+ln.g*t, 0) * cmplx.Rect(1, 2*math.Pi*ln.f*t+math.Pi*ln.c*t*t)
-			l.demod[j] = l.fit.r[at+j] + model
+			l.demod[j] = l.fit.r[at+j] + e*complex(1+ln.g*(t+float64(j)*l.win.dt), 0)
+			e *= q
+			q *= qq
 		}
 		f := ln.f + ln.c*mid
 		g := goertzel(l.demod, 2*math.Pi*f*l.win.dt) / complex(float64(per), 0)

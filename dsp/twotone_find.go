@@ -17,6 +17,7 @@ func (e *twoTone) scan(b *band, want int) int {
 	refused := no[:0]
 	for tries := 0; len(l.lines) < want && tries < 8; tries++ {
 		e.avoid = append(l.freqs(e.avoid[:0]), refused...)
+		l.specOf = -1
 		l.spec.take(l.win.z)
 		n0 := l.spec.noise(0, b.half, b.half, 4, e.avoid)
 		if math.IsNaN(n0) {
