@@ -6,6 +6,7 @@ import (
 	"sort"
 
 	"github.com/mjibson/go-dsp/fft"
+	blas "gonum.org/v1/gonum/blas/gonum"
 )
 
 // found is a spectral line that the search found.
@@ -29,78 +30,105 @@ const falseAlarm = 27
 // at most 3.2e-3 bins of bias with this window). It runs only while a tone is
 // wanted; go-dsp's FFT allocates and starts goroutines.
 type acquirer struct {
-	rate    float64
+	rate    float64 // after decimation
+	d       int
+	h       []float32 // lowpass before the decimation, at the input rate
 	n       int
 	lo, hi  float64
 	complex bool
 	win     []float64
 	sum     float64 // of win
 	sum2    float64 // of win squared
-	x       []float64
 	z       []complex128
 	p       []float64
 	tmp     []float64
 }
 
+// newAcquirer searches lo..hi in input at the given rate, first decimated as
+// far as hi allows.
 func newAcquirer(rate, lo, hi float64, isComplex bool) *acquirer {
+	top := max(math.Abs(lo), hi)
+	d := max(1, int(rate/(2.4*top)))
 	n := 64
-	for float64(n) < 1.3*rate {
+	for float64(n) < 1.3*rate/float64(d) {
 		n *= 2
 	}
-	return newAcquirerN(rate, lo, hi, isComplex, n)
-}
-
-// newAcquirerN looks at n samples, a power of two.
-func newAcquirerN(rate, lo, hi float64, isComplex bool, n int) *acquirer {
-	a := &acquirer{rate: rate, n: n, lo: lo, hi: hi, complex: isComplex}
-	a.win = make([]float64, a.n)
-	for i := range a.win { // periodic form
-		t := 2 * math.Pi * float64(i) / float64(a.n)
-		a.win[i] = 0.35875 - 0.48829*math.Cos(t) + 0.14128*math.Cos(2*t) - 0.01168*math.Cos(3*t)
-		a.sum += a.win[i]
-		a.sum2 += a.win[i] * a.win[i]
+	a := newAcquirerN(rate/float64(d), lo, hi, isComplex, n)
+	if d > 1 {
+		a.d = d
+		for _, v := range kaiserLowpass(top/rate, (a.rate-top)/rate, bandAtt) {
+			a.h = append(a.h, float32(v))
+		}
 	}
 	return a
 }
 
-// search returns the lines in the latest a.n samples of x (and q for complex
+// newAcquirerN looks at n samples, a power of two, without decimation.
+func newAcquirerN(rate, lo, hi float64, isComplex bool, n int) *acquirer {
+	return &acquirer{rate: rate, n: n, lo: lo, hi: hi, complex: isComplex, d: 1}
+}
+
+// need returns how many input samples a search looks at.
+func (a *acquirer) need() int { return (a.n-1)*a.d + max(1, len(a.h)) }
+
+// ready makes the window and the space, which an input that is never searched
+// does not need.
+func (a *acquirer) ready() {
+	if a.win != nil {
+		return
+	}
+	a.win = make([]float64, a.n)
+	for i := range a.win { // periodic form
+		t := 2 * math.Pi * float64(i) / float64(a.n)
+		c := math.Cos(t)
+		c2 := 2*c*c - 1
+		a.win[i] = 0.35875 - 0.48829*c + 0.14128*c2 - 0.01168*(2*c*c2-c)
+		a.sum += a.win[i]
+		a.sum2 += a.win[i] * a.win[i]
+	}
+	a.z, a.p = make([]complex128, a.n), make([]float64, a.n)
+}
+
+// search returns the lines in the latest need() samples of x (and q for complex
 // input), strongest first, at most 12. With fewer samples it returns nil.
 func (a *acquirer) search(x, q []float32) []found {
-	if len(x) < a.n {
+	if len(x) < a.need() {
 		return nil
 	}
-	x = x[len(x)-a.n:]
-	var spec []complex128
+	a.ready()
+	a.load(x[len(x)-a.need():], 1)
 	if a.complex {
-		q = q[len(q)-a.n:]
-		a.z = resize(a.z, a.n)
-		var mi, mq float64
-		for i := range x {
-			mi += float64(x[i])
-			mq += float64(q[i])
-		}
-		mi, mq = mi/float64(a.n), mq/float64(a.n)
-		for i := range a.z {
-			a.z[i] = complex((float64(x[i])-mi)*a.win[i], (float64(q[i])-mq)*a.win[i])
-		}
-		spec = fft.FFT(a.z)
-	} else {
-		mean := 0.0
-		for _, v := range x {
-			mean += float64(v)
-		}
-		mean /= float64(a.n)
-		a.x = resize(a.x, a.n)
-		for i := range a.x {
-			a.x[i] = (float64(x[i]) - mean) * a.win[i]
-		}
-		spec = fft.FFTReal(a.x)
+		a.load(q[len(q)-a.need():], 1i)
 	}
-	a.p = resize(a.p, a.n)
-	for i, v := range spec {
+	var mean complex128
+	for _, v := range a.z {
+		mean += v
+	}
+	mean /= complex(float64(a.n), 0)
+	for i := range a.z {
+		a.z[i] = (a.z[i] - mean) * complex(a.win[i], 0)
+	}
+	for i, v := range fft.FFT(a.z) {
 		a.p[i] = real(v)*real(v) + imag(v)*imag(v)
 	}
 	return a.lines()
+}
+
+// load decimates x into z, multiplied by unit; 1 replaces what was there and
+// 1i adds to it.
+func (a *acquirer) load(x []float32, unit complex128) {
+	var dot blas.Implementation
+	for i := range a.z {
+		v := float64(x[i*a.d])
+		if a.d > 1 {
+			v = float64(dot.Sdot(len(a.h), a.h, 1, x[i*a.d:i*a.d+len(a.h)], 1))
+		}
+		if unit == 1 {
+			a.z[i] = complex(v, 0)
+		} else {
+			a.z[i] += complex(0, v)
+		}
+	}
 }
 
 // power at bin k, which may be negative.

@@ -27,7 +27,7 @@ type plan struct {
 	gains  []float64
 }
 
-const gainSteps = 512 // of the table of gains, over half the output rate
+const gainSteps = 256 // of the table of gains, over half the output rate
 
 // newPlan chooses the two decimations for a sample rate: an output rate near
 // bandRate and an intermediate rate of a few kilohertz, where the comb's nulls
@@ -78,8 +78,9 @@ func newPlan(rate float64) *plan {
 
 func (p *plan) outRate() float64 { return p.rate / float64(p.d1*p.d2) }
 
-// reach is how many input samples a filter output looks to either side.
-func (p *plan) reach() int { return len(p.h1)/2 + p.d1*(len(p.h2)/2) }
+// reach is how many input samples a filter output looks to either side, at
+// most.
+func (p *plan) reach() int { return len(p.h1)/2 + 16 + p.d1*(len(p.h2)/2) }
 
 // gain returns the amplitude response at an offset from the band's centre, Hz,
 // interpolated in a table (good to 1e-6 where the response is flat).
@@ -142,7 +143,9 @@ func newBand(p *plan, f float64, isComplex bool, start int64, keep int) *band {
 	if isComplex {
 		g = 1
 	}
-	b.hi, b.hq = make([]float32, len(p.h1)), make([]float32, len(p.h1))
+	// Padded with zeros to the stride of the vector code, which multiplies
+	// sixteen at a time.
+	b.hi, b.hq = make([]float32, (len(p.h1)+15)&^15), make([]float32, (len(p.h1)+15)&^15)
 	for i, v := range p.h1 {
 		s, co := math.Sincos(-2 * math.Pi * turns(uint64(int64(i-c))*b.step))
 		b.hi[i], b.hq[i] = float32(g*v*co), float32(g*v*s)
@@ -210,18 +213,18 @@ func (b *band) push(x, q []float32) {
 		b.in[1] = append(b.in[1], q...)
 	}
 	var dot blas.Implementation
-	c1, n1 := int64(len(b.h1)/2), len(b.h1)
+	c1, n1 := int64(len(b.h1)/2), len(b.hi)
 	from := int(b.next1*int64(b.d1) - c1 - b.inAt)
 	for ; from+n1 <= len(b.in[0]); from += b.d1 {
 		if b.next1&63 == 0 || b.rot == 0 { // the recursion is set right now and then
 			b.rot = cmplx.Rect(1, -2*math.Pi*b.phaseAt(b.next1*int64(b.d1)))
 		}
 		w := b.in[0][from : from+n1]
-		yi, yq := float64(dot.Sdot(n1, b.hi, 1, w, 1)), float64(dot.Sdot(n1, b.hq, 1, w, 1))
+		yi, yq := float64(dot.Sdot(n1, w, 1, b.hi, 1)), float64(dot.Sdot(n1, w, 1, b.hq, 1))
 		if b.complex {
 			v := b.in[1][from : from+n1]
-			yi -= float64(dot.Sdot(n1, b.hq, 1, v, 1))
-			yq += float64(dot.Sdot(n1, b.hi, 1, v, 1))
+			yi -= float64(dot.Sdot(n1, v, 1, b.hq, 1))
+			yq += float64(dot.Sdot(n1, v, 1, b.hi, 1))
 		}
 		re, im := real(b.rot), imag(b.rot)
 		b.mid[0] = append(b.mid[0], float32(yi*re-yq*im))
@@ -245,8 +248,8 @@ func (b *band) second() {
 	from := int(b.next*int64(b.d2) - c2 - b.midAt)
 	for ; from+n2 <= len(b.mid[0]); from += b.d2 {
 		i := b.next & int64(len(b.z)-1)
-		b.z[i] = complex(float64(dot.Sdot(n2, b.h2, 1, b.mid[0][from:from+n2], 1)),
-			float64(dot.Sdot(n2, b.h2, 1, b.mid[1][from:from+n2], 1)))
+		b.z[i] = complex(float64(dot.Sdot(n2, b.mid[0][from:from+n2], 1, b.h2, 1)),
+			float64(dot.Sdot(n2, b.mid[1][from:from+n2], 1, b.h2, 1)))
 		b.ok[i] = true
 		b.next++
 	}

@@ -16,7 +16,13 @@ func (r *raw) push(n int64, x, q []float32) {
 	if len(r.x) == 0 {
 		r.at = n
 	}
-	if len(r.x)+len(x) > 2*r.keep+len(x) && len(r.x) > r.keep {
+	if room := 2 * r.keep; cap(r.x) < room { // once, rather than by doubling
+		r.x = make([]float32, 0, room+room/8)
+		if r.complex {
+			r.q = make([]float32, 0, room+room/8)
+		}
+	}
+	if len(r.x)+len(x) > 2*r.keep && len(r.x) > r.keep {
 		cut := len(r.x) - r.keep
 		r.x = r.x[:copy(r.x, r.x[cut:])]
 		if r.complex {

@@ -144,9 +144,9 @@ func (c *Config) signed() bool { return c.Hookup == Quadrature }
 
 // begin searches for the strongest tone.
 func (s *single) begin(end float64) {
-	x, q := s.raw.tail(int64(math.Ceil((end+edge)*s.cfg.Rate)), s.acq.n)
+	x, q := s.raw.tail(int64(math.Ceil((end+edge)*s.cfg.Rate)), s.acq.need())
 	best := found{}
-	bin := s.cfg.Rate / float64(s.acq.n)
+	bin := s.acq.rate / float64(s.acq.n)
 	for _, l := range s.acq.search(x, q) {
 		if math.Abs(l.f) > 3.5*bin {
 			best = l

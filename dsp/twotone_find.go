@@ -95,7 +95,7 @@ func (e *twoTone) standsAlone(b *band, f float64) bool {
 // begin searches the whole input for the tones and, where it finds some, takes
 // them up from the sound that is kept.
 func (e *twoTone) begin(i int64, mid float64) {
-	x, q := e.raw.tail(int64(math.Ceil((mid+0.5+edge)*e.cfg.Rate)), e.acq.n)
+	x, q := e.raw.tail(int64(math.Ceil((mid+0.5+edge)*e.cfg.Rate)), e.acq.need())
 	centres := e.choose(e.acq.search(x, q))
 	if len(centres) == 0 {
 		return
@@ -213,7 +213,7 @@ func (e *twoTone) wantsFar() bool {
 // lookFar searches the whole input for a better pair than the single tone that
 // is held, and changes over when it finds one.
 func (e *twoTone) lookFar(i int64, mid float64) {
-	x, q := e.raw.tail(int64(math.Ceil((mid+0.5+edge)*e.cfg.Rate)), e.acq.n)
+	x, q := e.raw.tail(int64(math.Ceil((mid+0.5+edge)*e.cfg.Rate)), e.acq.need())
 	lines := e.acq.search(x, q)
 	if len(lines) < 2 {
 		return
