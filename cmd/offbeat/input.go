@@ -93,9 +93,7 @@ func (in *inputSpec) check() *fieldError {
 
 // readInput reads the input of a bench.
 func readInput(n ast.Node, in *inputSpec) error {
-	all := []string{"kind", "device", "rate", "file", "starts", "path", "format", "channels"}
-	all = append(all, simKeys...)
-	m, err := readMapping(n, "input", all...)
+	m, err := readMapping(n, "input")
 	if err != nil {
 		return err
 	}
@@ -109,7 +107,7 @@ func readInput(n ast.Node, in *inputSpec) error {
 		kindSound:     {"kind", "device", "rate"},
 		kindRecording: {"kind", "file", "starts", "format", "rate", "channels"},
 		kindPipe:      {"kind", "path", "format", "rate", "channels"},
-		kindSimulate:  append([]string{"kind", "rate"}, simKeys...),
+		kindSimulate:  append([]string{"kind"}, simKeys...),
 	}[in.Kind]
 	if m, err = readMapping(n, "a "+in.Kind+" input", allowed...); err != nil {
 		return err

@@ -176,6 +176,7 @@ func parseRange(s string) (low, high float64, err error) {
 // quoted shows what the user wrote, short and on one line.
 func quoted(s string) string {
 	const most = 60
+	s = strings.ToValidUTF8(s, "?")
 	if len(s) > most {
 		cut := most
 		for cut > 0 && s[cut]&0xc0 == 0x80 {

@@ -5,6 +5,7 @@ import (
 	"fmt"
 	"slices"
 	"strings"
+	"unicode/utf8"
 
 	"github.com/goccy/go-yaml"
 	"github.com/goccy/go-yaml/ast"
@@ -40,8 +41,20 @@ func oneLine(s string) string {
 	return strings.Join(strings.FieldsFunc(s, func(r rune) bool { return r < ' ' }), " ")
 }
 
+// brief is oneLine for what a library says, which may quote the whole file.
+func brief(s string) string {
+	const most = 200
+	if s = oneLine(s); len(s) > most {
+		s = strings.ToValidUTF8(s[:most], "") + "…"
+	}
+	return s
+}
+
 // parseYAML reads the one document of a file. It returns nil for an empty one.
 func parseYAML(text []byte) (ast.Node, error) {
+	if !utf8.Valid(text) {
+		return nil, &fault{1, 1, "not text: a configuration is YAML in UTF-8"}
+	}
 	if f := tooNested(text); f != nil {
 		return nil, f
 	}
@@ -49,9 +62,9 @@ func parseYAML(text []byte) (ast.Node, error) {
 	if err != nil {
 		var syntax *yaml.SyntaxError
 		if errors.As(err, &syntax) {
-			return nil, faultAtToken(syntax.Token, "not valid YAML: "+syntax.Message)
+			return nil, faultAtToken(syntax.Token, "not valid YAML: "+brief(syntax.Message))
 		}
-		return nil, &fault{1, 1, oneLine("not valid YAML: " + err.Error())}
+		return nil, &fault{1, 1, "not valid YAML: " + brief(err.Error())}
 	}
 	var root ast.Node
 	for _, d := range file.Docs {
@@ -99,8 +112,8 @@ type mapping struct {
 	value map[string]ast.Node
 }
 
-// readMapping checks that n is a mapping with no key but the allowed ones, and
-// none twice.
+// readMapping checks that n is a mapping with no key but the allowed ones (none
+// listed: any), and none twice.
 func readMapping(n ast.Node, what string, allowed ...string) (*mapping, error) {
 	n, err := plain(n)
 	if err != nil {
@@ -112,10 +125,15 @@ func readMapping(n ast.Node, what string, allowed ...string) (*mapping, error) {
 		pairs = m.Values
 	case *ast.MappingValueNode:
 		pairs = []*ast.MappingValueNode{m}
-	case *ast.NullNode:
-		return nil, faultAt(n, "%s is empty: it takes %s", what, strings.Join(allowed, ", "))
 	default:
-		return nil, faultAt(n, "%s must be keys with values: %s", what, strings.Join(allowed, ", "))
+		hint := ""
+		if len(allowed) > 0 {
+			hint = ": " + strings.Join(allowed, ", ")
+		}
+		if _, null := n.(*ast.NullNode); null {
+			return nil, faultAt(n, "%s is empty: it takes keys with values%s", what, hint)
+		}
+		return nil, faultAt(n, "%s must be keys with values%s", what, hint)
 	}
 	m := &mapping{n, map[string]ast.Node{}}
 	for i, p := range pairs {
@@ -126,7 +144,7 @@ func readMapping(n ast.Node, what string, allowed ...string) (*mapping, error) {
 		if i == 0 {
 			m.at = p.Key
 		}
-		if !slices.Contains(allowed, key) {
+		if len(allowed) > 0 && !slices.Contains(allowed, key) {
 			return nil, faultAt(p.Key, "unknown key %s in %s: allowed are %s", quoted(key), what, strings.Join(allowed, ", "))
 		}
 		if _, twice := m.value[key]; twice {
