@@ -286,9 +286,10 @@ func (q *sequence) agrees(f *frame.Frame) error {
 func (q *sequence) ended(err error) error {
 	short := q.info.NSamples > q.done
 	switch {
+	case err == io.EOF && !short:
+		return io.EOF
 	case q.info.NSamples > 0 && !short:
-		return io.EOF // whatever stands behind the sound, a tag for example
-	case errors.Is(err, io.EOF) && !short:
+		q.fd.noteThat("what stands behind the end that its header states (a tag, perhaps) is not read")
 		return io.EOF
 	case errors.Is(err, io.EOF), errors.Is(err, io.ErrUnexpectedEOF):
 		missing := ""
