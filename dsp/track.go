@@ -20,6 +20,7 @@ type track struct {
 	whole bool    // there from end to end of the last window, in one piece
 	tail  bool    // there at the end of the last window
 	seen  int     // windows in a row that showed it
+	ev    evidence
 }
 
 // cn0 returns the tone's C/N0 as a ratio, Hz.
@@ -197,7 +198,9 @@ func (l *lens) take(t *track, b *band, mid float64, ln int) {
 	if !t.whole && !fresh {
 		return // what it was stays the better guess of what it is
 	}
-	if t.whole { // an average over about ten seconds
+	if t.whole {
+		t.ev.add(20*math.Log10(cmplx.Abs(x.a)/gain), l.spec.pair(x.f, n0, b.half))
+		// an average over about ten seconds
 		t.noise += max(0.1, 1/float64(t.seen+1)) * (s - t.noise)
 	}
 	f := x.f + b.centre

@@ -22,6 +22,7 @@ type pairMemory struct {
 	at             float64 // s
 	carrier, local float64 // Hz
 	ampC, ampL     float64
+	evC, evL       evidence
 }
 
 // twoTone holds the carrier's tone and the local's.

@@ -18,7 +18,16 @@ func (e *twoTone) identify(mid float64) {
 		}
 		if e.local >= 0 && math.Hypot(a.uf, b.uf) < 0.1 {
 			c, l := &e.tr[1-e.local], &e.tr[e.local]
-			e.memory = pairMemory{known: true, at: mid, carrier: c.f, local: l.f, ampC: c.amp, ampL: l.amp}
+			// A tone that came back goes on with the evidence it had.
+			for _, x := range []struct {
+				t   *track
+				was evidence
+			}{{c, e.memory.evC}, {l, e.memory.evL}} {
+				if x.t.ev.seconds < x.was.seconds {
+					x.t.ev = x.was
+				}
+			}
+			e.memory = pairMemory{true, mid, c.f, l.f, c.amp, l.amp, c.ev, l.ev}
 		}
 		return
 	}
@@ -112,9 +121,6 @@ func (e *twoTone) reading(mid float64) Reading {
 	default:
 		e.sayBoth(&r, mid, scale)
 	}
-	if !e.cfg.Wired && (r.State == Apart || r.State == Unsure) {
-		r.flag(Unproven)
-	}
 	return r
 }
 
@@ -156,6 +162,17 @@ func (e *twoTone) sayBoth(r *Reading, mid, scale float64) {
 		e.sayTone(a, &r.CarrierTone, &r.CarrierDBFS, &r.CarrierCN0, scale)
 		e.sayTone(b, &r.LocalTone, &r.LocalDBFS, &r.LocalCN0, scale)
 		r.Why = ""
+		why, proven := a.ev.carrierLike(&b.ev)
+		if proven {
+			r.Why = "the carrier: " + why
+		} else if !e.cfg.Wired {
+			r.flag(Unproven)
+		}
+		if a.ev.faded && !e.cfg.Wired {
+			r.flag(Faded)
+		}
+	} else if !e.cfg.Wired {
+		r.flag(Unproven)
 	}
 	if !whole {
 		r.Why = "a tone was not there, or jumped, within this second"
