@@ -218,7 +218,10 @@ func (s *Summer) mean() (mean, u float64, method string) {
 	scale := s.cfg.clockScale()
 	d1, n1 := stability.Overlapping(s.phase, s.run, dt, 1)
 	white := d1 * dt / math.Sqrt(3) // sigma of white phase noise that gives this adev, cycles
-	if n1 < 8 || resid < 1.6*white {
+	// In short runs wandering cannot show in the residuals: there the phases must
+	// also be as quiet as the readings' own uncertainty says.
+	trusted := white < 4*s.phaseU() || points > 30*s.runs()
+	if n1 < 8 || resid < 1.6*white && trusted {
 		su := max(resid, s.phaseU(), white) / math.Sqrt(sxx)
 		return slope * scale, su * scale, "phase regression over unbroken runs"
 	}
@@ -226,7 +229,9 @@ func (s *Summer) mean() (mean, u float64, method string) {
 	worst := 0.0
 	for k := 1; float64(k)*dt <= held/3; k *= 2 {
 		if a, n := stability.Overlapping(s.phase, s.run, dt, k); n >= 2 {
-			worst = max(worst, a*math.Sqrt(float64(k)*dt/held))
+			// Few differences make a poor estimate: take its upper limit.
+			_, high := stability.Limits(a, stability.EDF(0, n+2*k, k), 0.6827)
+			worst = max(worst, high*math.Sqrt(float64(k)*dt/held))
 		}
 	}
 	return m * scale, max(worst, s.phaseU()/held) * scale, "mean over unbroken runs; uncertainty from the Allan deviation"
@@ -291,6 +296,17 @@ func (s *Summer) regress() (slope, resid, sxx float64, points int) {
 		resid = math.Sqrt(sum / float64(free))
 	}
 	return slope, resid, sxx, points
+}
+
+// runs returns the number of unbroken runs of at least two phases.
+func (s *Summer) runs() int {
+	runs := 0
+	s.eachRun(func(lo, hi int) {
+		if hi-lo >= 2 {
+			runs++
+		}
+	})
+	return max(runs, 1)
 }
 
 // eachRun calls f for every stretch of one phase run.
