@@ -33,11 +33,14 @@ type inputSpec struct {
 	Encoding string  // raw: how a sample is written; empty: the file says
 	Channels int     // raw: interleaved channels; 0: 1
 	Starts   int64   // recording: when it began, Unix ns; 0: not said
+	Play     bool    // recording: at the pace of the clock, as if it were live
 	Sim      simSpec
 }
 
 // live reports whether an input that ends or fails may come back.
-func (in *inputSpec) live() bool { return in.Kind == kindSound || in.Kind == kindPipe && in.Path != "-" }
+func (in *inputSpec) live() bool {
+	return in.Kind == kindSound || in.Kind == kindPipe && in.Path != "-"
+}
 
 // paced reports whether the input's samples are for the present moment, so that
 // a second in which none arrive is a second without signal. A recording and a
@@ -126,6 +129,8 @@ func readInput(n ast.Node, in *inputSpec) error {
 	switch {
 	case in.Kind == kindRecording && in.Path == "":
 		return faultAt(m.at, "a recording input needs file: the WAV, FLAC or raw file")
+	case in.Kind == kindRecording:
+		in.Play = in.Starts == 0
 	case in.Kind == kindPipe && in.Path == "":
 		return faultAt(m.at, "a pipe input needs path: the FIFO, or - for standard input")
 	case in.Kind == kindSimulate:
@@ -163,10 +168,10 @@ func parseInput(s string) (inputSpec, error) {
 	case s == "-":
 		return inputSpec{Kind: kindPipe, Path: "-"}, nil
 	}
-	if info, err := os.Stat(s); err == nil && info.Mode()&os.ModeNamedPipe != 0 {
+	if isFIFO(s) {
 		return inputSpec{Kind: kindPipe, Path: s}, nil
 	}
-	return inputSpec{Kind: kindRecording, Path: s}, nil
+	return inputSpec{Kind: kindRecording, Path: s, Play: true}, nil
 }
 
 // opener opens an input for the given channels (1-based). The one in use is
@@ -178,4 +183,9 @@ func union(a, b []int) []int {
 	u := append(slices.Clone(a), b...)
 	slices.Sort(u)
 	return slices.Compact(u)
+}
+
+func isFIFO(path string) bool {
+	info, err := os.Stat(path)
+	return err == nil && info.Mode()&os.ModeNamedPipe != 0
 }

@@ -2,6 +2,7 @@ package main
 
 import (
 	"fmt"
+	"time"
 
 	"offbeat/capture"
 	"offbeat/capture/recording"
@@ -11,15 +12,23 @@ import (
 func openInput(in inputSpec, channels []int) (capture.Source, error) {
 	switch in.Kind {
 	case kindRecording, kindPipe:
-		return recording.Open(in.Path, in.recordingOptions(channels))
+		return openRecording(in, channels)
 	}
 	return nil, fmt.Errorf("PENDING %s", in.Kind)
 }
 
-func (in *inputSpec) recordingOptions(channels []int) recording.Options {
+func openRecording(in inputSpec, channels []int) (capture.Source, error) {
 	opt := recording.Options{Channels: channels}
 	if in.Encoding != "" {
 		opt.Raw = &recording.RawFormat{Encoding: in.Encoding, Rate: in.Rate, Channels: max(in.Channels, 1)}
 	}
-	return opt
+	if in.Kind == kindPipe {
+		opt.Patience = 5 * time.Second // then it is tried again, and the daemon can end meanwhile
+		opt.Reopen = in.Path != "-" && in.Encoding != "" && isFIFO(in.Path)
+	}
+	src, err := recording.Open(in.Path, opt)
+	if err == nil && in.Play {
+		return newPacer(src), nil
+	}
+	return src, err
 }

@@ -10,7 +10,7 @@ var simKeys = []string{"seed"}
 func readSim(m *mapping, in *inputSpec) error { return nil }
 func soundSupported() bool                    { return false }
 
-var runCommand = &command{name: "run"}
 var inputsCommand = &command{name: "inputs"}
 var simulateCommand = &command{name: "simulate"}
 var checkCommand = &command{name: "check"}
+var runCommand = &command{name: "run"}

@@ -178,9 +178,11 @@ func (f *flags) measurement(s *settings) {
 	quantity(f, &s.Input.Channels, "channels", parseCount)
 }
 
-func parseHookup(s string) (dsp.Hookup, error)     { return oneOf(s, dsp.Hookups) }
-func parseSideband(s string) (dsp.Sideband, error) { return oneOf(s, []dsp.Sideband{dsp.Upper, dsp.Lower}) }
-func parseEncoding(s string) (string, error)       { return oneOf(s, encodings) }
+func parseHookup(s string) (dsp.Hookup, error) { return oneOf(s, dsp.Hookups) }
+func parseSideband(s string) (dsp.Sideband, error) {
+	return oneOf(s, []dsp.Sideband{dsp.Upper, dsp.Lower})
+}
+func parseEncoding(s string) (string, error) { return oneOf(s, encodings) }
 
 // encodings of raw input.
 var encodings = []string{"s16le", "s24le", "s32le", "f32le"}
