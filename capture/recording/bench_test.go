@@ -90,3 +90,24 @@ func BenchmarkDecode(b *testing.B) {
 		}
 	}
 }
+
+// BenchmarkFLAC decodes a minute of 48 kHz 16-bit mono, a tone in noise.
+func BenchmarkFLAC(b *testing.B) {
+	const n = 60 * 48000
+	wav, _ := tune(b, 48000, 1, 16, 16, n)
+	path := file(b, flacOf(b, wav))
+	var blk capture.Block
+	b.ReportAllocs()
+	b.ResetTimer()
+	for range b.N {
+		src, err := Open(path, Options{})
+		if err != nil {
+			b.Fatal(err)
+		}
+		if got := drain(b, src, &blk); got != n {
+			b.Fatal(got)
+		}
+		src.Close()
+	}
+	b.ReportMetric(float64(b.Elapsed().Nanoseconds())/float64(b.N)/n, "ns/sample")
+}

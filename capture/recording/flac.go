@@ -92,7 +92,15 @@ func openStream(fd *feed) (stream *flac.Stream, err error) {
 			err = fmt.Errorf("%s: the FLAC header is damaged", fd.name)
 		}
 	}()
-	stream, err = flac.New(fd)
+	// The library parses whatever block comes first, and believes the size
+	// that a picture states for itself (80 MB in a file of 40 bytes).
+	b, err := fd.peek(8)
+	if err == nil && (b[4]&0x7F != 0 || b[5] != 0 || b[6] != 0 || b[7] != 34) {
+		return nil, fmt.Errorf("%s: the FLAC header is damaged: its first block is not the stream information", fd.name)
+	}
+	if err == nil {
+		stream, err = flac.New(fd)
+	}
 	switch {
 	case errors.Is(err, io.EOF), errors.Is(err, io.ErrUnexpectedEOF):
 		return nil, fmt.Errorf("%s: ends within the FLAC header: the recording holds no samples", fd.name)

@@ -253,6 +253,11 @@ func TestFLACRefusals(t *testing.T) {
 			t.Errorf("%d bytes: err %v", n, err)
 		}
 	}
+	picture := bytes.Clone(data)
+	picture[4] = 6
+	if _, err := fromBytes(bytes.NewReader(picture), Options{}); err == nil || err.Error() != "x: the FLAC header is damaged: its first block is not the stream information" {
+		t.Errorf("err %v", err)
+	}
 	zero := bytes.Clone(data)
 	zero[18], zero[19], zero[20] = 0, 0, zero[20]&0x0F // RFC 9639, 8.2: 20 bits of sample rate
 	if _, err := fromBytes(bytes.NewReader(zero), Options{}); err == nil || !strings.Contains(err.Error(), "invalid sample rate (0)") {

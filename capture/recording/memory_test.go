@@ -84,3 +84,37 @@ func TestConstantMemory(t *testing.T) {
 		t.Errorf("%d bytes were allocated", grown)
 	}
 }
+
+// TestFLACMemory: FLAC allocates every frame, but keeps none: twenty million
+// samples go through a heap of a few megabytes.
+func TestFLACMemory(t *testing.T) {
+	data := flacOf(t, riff(fmtChunk(1, 1, 48000, 16), chunk("data", make([]byte, 40e6))))
+	src, err := fromBytes(bytes.NewReader(data), Options{})
+	if err != nil {
+		t.Fatal(err)
+	}
+	var b capture.Block
+	var m runtime.MemStats
+	runtime.GC()
+	runtime.ReadMemStats(&m)
+	least, most, n := m.HeapAlloc, uint64(0), 0
+	for i := 0; ; i++ {
+		err := src.Read(&b)
+		if err == io.EOF {
+			break
+		}
+		if err != nil {
+			t.Fatal(err)
+		}
+		n += b.Len()
+		if i%1000 == 500 {
+			runtime.GC()
+			runtime.ReadMemStats(&m)
+			most = max(most, m.HeapAlloc)
+		}
+	}
+	if n != 20e6 || most > least+4<<20 {
+		t.Errorf("%d samples, heap from %d to %d bytes", n, least, most)
+	}
+	src.Close()
+}
