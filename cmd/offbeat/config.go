@@ -166,6 +166,12 @@ func readBench(n ast.Node) (*settings, *mapping, error) {
 		}
 		return nil, nil, faultAt(at, "%s", bad)
 	}
+	if s.Input.Kind == kindSimulate {
+		s.Input.Sim.follow(&s)
+		if err := s.Input.Sim.check(); err != nil {
+			return nil, nil, faultAt(m.where("input"), "%s", err)
+		}
+	}
 	if rate := s.Input.knownRate(); rate > 0 {
 		if _, err := dsp.New(s.config(rate)); err != nil {
 			return nil, nil, faultAt(m.at, "bench %s: %s", s.Name, err)

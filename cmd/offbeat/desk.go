@@ -9,12 +9,16 @@ import (
 	"offbeat/capture"
 	"offbeat/dsp"
 	"offbeat/metrics"
+	"offbeat/metrics/journal"
 )
+
+// inputKind is the kind of events about an input: it listens, failed, ended.
+const inputKind = "input"
 
 // keeper is where a desk writes down what must not be lost.
 type keeper interface {
 	Append(bench string, at time.Time, r dsp.Reading)
-	Event(bench string, at time.Time, kind, text string)
+	Event(bench string, at time.Time, kind, text string, data any)
 }
 
 // desk is the listener of one bench of the daemon: it passes readings on to the
@@ -29,7 +33,10 @@ type desk struct {
 	// Of the bench's goroutine:
 	lost    map[capture.Cause]int64 // since the latest reading
 	stalled bool
+	missing int64 // since it stalled
 	rate    float64
+	runBase int // added to the numbers of phase runs in the journal
+	lastRun int
 
 	mu      sync.Mutex
 	failing string // why no samples come; empty: they do, or may
@@ -41,7 +48,9 @@ type desk struct {
 func (d *desk) opened(f capture.Format, cfg dsp.Config) {
 	d.rate = f.Rate
 	d.log.Info("listening", "input", d.input, "format", f.Encoding, "rate", f.Rate)
-	d.event(time.Now(), "listening", fmt.Sprintf("%s, %s, %s", d.input, f.Encoding, hertz(f.Rate)))
+	// Runs of phase of one opening must not seem to go on from another.
+	d.runBase = max(int(time.Now().Unix()), d.lastRun+1)
+	d.event(time.Now(), inputKind, fmt.Sprintf("%s, %s, %s", d.input, f.Encoding, hertz(f.Rate)))
 	d.status("", false)
 }
 
@@ -50,15 +59,16 @@ func (d *desk) samples(n, nonFinite int) { d.meter.Samples(n, nonFinite) }
 // gap counts what is missing. It goes on the time line once a second at most,
 // and an outage only when it begins and ends.
 func (d *desk) gap(at time.Time, cause capture.Cause, n int64) {
-	d.meter.Gap(string(cause), n)
 	if cause == capture.Stalled {
+		d.missing += n
 		if !d.stalled {
 			d.stalled = true
 			d.log.Warn("no samples arrive", "input", d.input)
-			d.event(at, "stalled", "no samples arrive from "+d.input)
+			d.event(at, journal.Gap, "no samples arrive from "+d.input)
 		}
 		return
 	}
+	d.meter.Gap(string(cause), n)
 	if d.lost == nil {
 		d.lost = map[capture.Cause]int64{}
 	}
@@ -67,6 +77,8 @@ func (d *desk) gap(at time.Time, cause capture.Cause, n int64) {
 
 func (d *desk) reading(at time.Time, r dsp.Reading) {
 	d.meter.Reading(r)
+	r.PhaseRun += d.runBase
+	d.lastRun = r.PhaseRun
 	d.keep.Append(d.name, at, r)
 	d.noteGaps(at)
 	d.mu.Lock()
@@ -80,16 +92,17 @@ func (d *desk) noteGaps(at time.Time) {
 		if n := d.lost[cause]; n > 0 {
 			text := fmt.Sprintf("%d samples lost (%s)", n, length(float64(n)/d.rate))
 			d.log.Warn("samples lost", "cause", cause, "samples", n)
-			d.event(at, "gap", string(cause)+": "+text)
+			d.keep.Event(d.name, at, journal.Gap, string(cause)+": "+text, map[string]any{"cause": cause, "samples": n})
 		}
 	}
 	clear(d.lost)
 }
 
 func (d *desk) back(at time.Time, missing time.Duration) {
-	d.stalled = false
+	d.meter.Gap(string(capture.Stalled), d.missing) // one gap, however long
+	d.stalled, d.missing = false, 0
 	d.log.Info("samples arrive again", "input", d.input, "missing", missing.Round(10*time.Millisecond))
-	d.event(at, "back", fmt.Sprintf("samples arrive again after about %s", length(missing.Seconds()+patience.Seconds())))
+	d.event(at, journal.Gap, fmt.Sprintf("samples arrive again after about %s", length(missing.Seconds()+patience.Seconds())))
 	d.status("", false)
 }
 
@@ -98,7 +111,7 @@ func (d *desk) trouble(err error) {
 	d.noteGaps(time.Now())
 	if err == nil {
 		d.log.Info("the input has ended", "input", d.input)
-		d.event(time.Now(), "ended", d.input+" has ended")
+		d.event(time.Now(), inputKind, d.input+" has ended")
 		d.status("", true)
 		return
 	}
@@ -109,14 +122,14 @@ func (d *desk) trouble(err error) {
 		return
 	}
 	d.log.Error("the input failed", "error", oneLine(err.Error()))
-	d.event(time.Now(), "input failed", oneLine(err.Error()))
+	d.event(time.Now(), inputKind, "failed: "+oneLine(err.Error()))
 	d.status(oneLine(err.Error()), false)
 }
 
 func (d *desk) glimpse(time.Time, dsp.Glimpse) {}
 func (d *desk) idle()                          {}
 
-func (d *desk) event(at time.Time, kind, text string) { d.keep.Event(d.name, at, kind, text) }
+func (d *desk) event(at time.Time, kind, text string) { d.keep.Event(d.name, at, kind, text, nil) }
 
 func (d *desk) status(failing string, ended bool) {
 	d.mu.Lock()

@@ -6,6 +6,7 @@ import (
 
 	"offbeat/capture"
 	"offbeat/capture/recording"
+	"offbeat/capture/sim"
 )
 
 // openInput opens an input for the given channels, numbered from 1.
@@ -13,6 +14,10 @@ func openInput(in inputSpec, channels []int) (capture.Source, error) {
 	switch in.Kind {
 	case kindRecording, kindPipe:
 		return openRecording(in, channels)
+	case kindSimulate:
+		scene := in.Sim.scene()
+		scene.Pace = true
+		return sim.New(scene)
 	}
 	return nil, fmt.Errorf("PENDING %s", in.Kind)
 }

@@ -69,4 +69,6 @@ func (p *pacer) Read(b *capture.Block) error {
 }
 
 // time returns how far into the recording sample i lies.
-func (p *pacer) time(i int64) time.Duration { return time.Duration(math.Round(float64(i) / p.rate * 1e9)) }
+func (p *pacer) time(i int64) time.Duration {
+	return time.Duration(math.Round(float64(i) / p.rate * 1e9))
+}

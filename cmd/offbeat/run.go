@@ -1,5 +1,3 @@
-//go:build pending
-
 package main
 
 import (
@@ -10,13 +8,16 @@ import (
 	"os"
 	"os/signal"
 	"path/filepath"
+	"runtime"
 	"strings"
 	"sync"
 	"syscall"
 	"time"
 
 	"offbeat/capture"
+	"offbeat/dsp"
 	"offbeat/metrics"
+	"offbeat/metrics/journal"
 	"offbeat/metrics/web"
 )
 
@@ -71,7 +72,7 @@ type daemon struct {
 	cfg    *config
 	over   func(*config) // puts the flags over a configuration
 	meters *metrics.Exporter
-	book   *book
+	book   *journal.Journal
 	house  *house
 
 	mu    sync.Mutex
@@ -90,7 +91,7 @@ func runDaemon(ctx context.Context, c *command, args []string, std stdio) error 
 
 	d.log = slog.New(slog.NewTextHandler(std.err, nil))
 	version, revision := buildVersion()
-	d.meters = metrics.New(metrics.BuildInfo{Version: version, Revision: revision, GoVersion: goVersion()})
+	d.meters = metrics.New(metrics.BuildInfo{Version: version, Revision: revision, GoVersion: runtime.Version()})
 	server, err := web.Listen(web.Config{Listen: d.cfg.Listen, WebConfigFile: d.cfg.WebConfig, Insecure: d.cfg.Insecure, Log: d.log},
 		web.Handlers{Metrics: d.meters.Handler(), Page: web.Page(d.meters, version), Health: d.health, Ready: d.ready})
 	if err != nil {
@@ -100,14 +101,14 @@ func runDaemon(ctx context.Context, c *command, args []string, std stdio) error 
 		server.Close()
 		return err
 	}
-	d.meters.Journal(d.book.stats)
+	d.meters.Journal(bookStats(d.book))
 	serving, stopServing := context.WithCancel(context.Background())
 	defer stopServing()
 	served := make(chan error, 1)
 	go func() { served <- server.Serve(serving) }()
 
 	d.log.Info("start", "version", version, "revision", revision, "benches", len(d.cfg.Benches))
-	d.book.Event("", time.Now(), "start", "offbeat "+version)
+	d.book.Event("", time.Now(), journal.Start, "offbeat "+version, nil)
 	houseCtx, stopHouse := context.WithCancel(context.Background())
 	defer stopHouse()
 	d.house = newHouse(houseCtx, openInput, d.log, d.engage, d.dismiss)
@@ -167,6 +168,12 @@ func (d *daemon) configure(c *command, args []string) error {
 			spec.Rate = one.Input.Rate
 		}
 		one.Input = spec
+		if spec.Kind == kindSimulate && !f.given("local-tone") {
+			one.LocalTone = demoLocalTone(&one)
+		}
+		if spec.Kind == kindSimulate && !f.given("name") {
+			one.Name = "counter"
+		}
 		d.cfg, err = configOfOne(one)
 	} else {
 		for _, name := range f.seen {
@@ -188,6 +195,19 @@ func (d *daemon) configure(c *command, args []string) error {
 	return nil
 }
 
+// demoLocalTone tells the simulated bench which tone is the local's, as the user
+// of a real one would.
+func demoLocalTone(s *settings) float64 {
+	tone, off := 1000.0, defaultSim.Offset+s.heard()-s.carrier()
+	switch {
+	case s.Hookup == dsp.Mixer || s.Hookup == dsp.Quadrature:
+		return 0
+	case s.Sideband == dsp.Lower:
+		return tone - off
+	}
+	return tone + off
+}
+
 // configOfOne makes the configuration of a single bench described by flags.
 func configOfOne(s settings) (*config, error) {
 	if bad := s.Input.check(); bad != nil {
@@ -195,6 +215,13 @@ func configOfOne(s settings) (*config, error) {
 	}
 	if bad := s.check(); bad != nil {
 		return nil, bad.asFlag()
+	}
+	if s.Input.Kind == kindSimulate {
+		s.Input.Sim.Rate = s.Input.Rate
+		s.Input.Sim.follow(&s)
+		if err := s.Input.Sim.check(); err != nil {
+			return nil, err
+		}
 	}
 	return &config{Listen: defaultListen, Benches: []settings{s}}, nil
 }
@@ -231,7 +258,7 @@ func (d *daemon) reload() {
 	if err != nil {
 		d.log.Error("the configuration is bad; the old one stays", "error", oneLine(err.Error()))
 		d.meters.Reload(false)
-		d.book.Event("", time.Now(), "reload failed", oneLine(err.Error()))
+		d.book.Event("", time.Now(), journal.Reload, "refused: "+oneLine(err.Error()), nil)
 		return
 	}
 	if c.Journal == "" {
@@ -248,17 +275,17 @@ func (d *daemon) reload() {
 	d.cfg.Benches = c.Benches
 	d.meters.Reload(true)
 	d.log.Info("the configuration was read again", "benches", len(c.Benches))
-	d.book.Event("", time.Now(), "reload", fmt.Sprintf("%d benches", len(c.Benches)))
+	d.book.Event("", time.Now(), journal.Reload, fmt.Sprintf("%d benches", len(c.Benches)), nil)
 }
 
 // engage makes the listener of a bench.
 func (d *daemon) engage(s settings) listener {
 	cfg := s.config(48000)
 	if cfg.Hookup == "" {
-		cfg.Hookup = "two-tone"
+		cfg.Hookup = dsp.TwoTone
 	}
 	if cfg.Sideband == "" {
-		cfg.Sideband = "usb"
+		cfg.Sideband = dsp.Upper
 	}
 	var causes []string
 	for _, c := range capture.Causes {
@@ -267,6 +294,7 @@ func (d *daemon) engage(s settings) listener {
 	k := &desk{name: s.Name, input: s.Input.String(), log: d.log.With("bench", s.Name), keep: d.book}
 	k.meter = d.meters.Bench(s.Name, metrics.BenchInfo{Hookup: string(cfg.Hookup), Sideband: string(cfg.Sideband),
 		CarrierHz: cfg.Carrier, LocalHz: cfg.Local, Input: k.input}, causes...)
+	d.book.Setup(s.Name, journal.Setup{Hookup: string(cfg.Hookup), Sideband: string(cfg.Sideband), CarrierHz: cfg.Carrier, LocalHz: cfg.Local, Input: k.input})
 	d.mu.Lock()
 	defer d.mu.Unlock()
 	d.desks[s.Name] = k
@@ -295,20 +323,20 @@ func (d *daemon) ready() (why []string) {
 }
 
 // health says what is wrong with the daemon itself.
-func (d *daemon) health() []string { return d.book.wrong() }
+func (d *daemon) health() []string { return bookTrouble(d.book) }
 
 // end waits, within bounds, for the last readings and for the journal.
 func (d *daemon) end() error {
 	if !within(drainTime, d.house.wait) {
 		d.log.Error("a bench does not end; its last reading may be missing")
 	}
-	d.book.Event("", time.Now(), "stop", "the daemon ended")
+	d.book.Event("", time.Now(), journal.Stop, "the daemon ended", nil)
 	var err error
 	if !within(flushTime, func() { err = d.book.Close() }) {
-		err = errors.New("the journal could not be written to the end in time")
+		err = errors.New("journal: it could not be written to the end in time")
 	}
 	if err != nil {
-		return &exitError{exitNothing, "journal: " + err.Error()}
+		return &exitError{exitNothing, err.Error()}
 	}
 	return nil
 }

@@ -1,0 +1,6 @@
+package main
+
+func soundSupported() bool { return false }
+
+var inputsCommand = &command{name: "inputs"}
+var checkCommand = &command{name: "check"}
