@@ -183,7 +183,9 @@ func (d *daemon) configure(c *command, args []string) error {
 				return fmt.Errorf("--%s describes a bench: with --config it stands in the file", name)
 			}
 		}
-		d.cfg, err = loadConfig(d.path)
+		if d.cfg, err = loadConfig(d.path); err != nil {
+			err = &configError{err}
+		}
 	}
 	if err != nil {
 		return err
@@ -194,6 +196,9 @@ func (d *daemon) configure(c *command, args []string) error {
 	}
 	return nil
 }
+
+// configError says that the configuration file is at fault, not the usage.
+type configError struct{ error }
 
 // demoLocalTone tells the simulated bench which tone is the local's, as the user
 // of a real one would.

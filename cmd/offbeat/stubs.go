@@ -3,4 +3,3 @@ package main
 func soundSupported() bool { return false }
 
 var inputsCommand = &command{name: "inputs"}
-var checkCommand = &command{name: "check"}
