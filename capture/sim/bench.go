@@ -19,11 +19,10 @@ import (
 // heard does not depend on how it is read. Phases are integers of 2^-64 turns:
 // they stay exact for as long as anyone will listen.
 type Bench struct {
-	cfg   Config
-	sign  float64
-	step  int     // samples a step
-	dts   float64 // true seconds a sample
-	drops bool
+	cfg  Config
+	sign float64
+	step int     // samples a step
+	dts  float64 // true seconds a sample
 
 	n     int64 // next sample to be made
 	given int64 // next sample to be given

@@ -85,7 +85,7 @@ func (b *Bench) sound(stepC, stepB uint64, hearC, hearL bool) {
 	rotC := cmplx.Rect(1, angle(stepC))
 	ec := cmplx.Rect(1, angle(b.pc))
 	steady := !b.ch.two
-	env := b.g[1][0]
+	var env complex128
 	two := c.Hookup == "two-tone" || c.Baseband
 	for i := range b.out[0] {
 		if steady {
