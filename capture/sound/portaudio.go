@@ -63,7 +63,7 @@ func list() ([]Device, error) {
 		if d.MaxInputChannels < 1 {
 			continue
 		}
-		out = append(out, Device{Name: d.Name, API: d.HostApi.Name, Channels: d.MaxInputChannels, Rate: d.DefaultSampleRate, Default: def != nil && def.Index == d.Index, index: i})
+		out = append(out, Device{Name: d.Name, API: d.HostApi.Name, Channels: d.MaxInputChannels, Rate: d.DefaultSampleRate, Default: def != nil && def.Index == d.Index, Index: i})
 	}
 	return out, nil
 }
@@ -90,7 +90,7 @@ func openStream(d Device, rate float64, channels, frames int) (*paStream, error)
 	// The list may have changed since it was read.
 	var info *portaudio.DeviceInfo
 	for i, x := range all {
-		if x.Name == d.Name && x.MaxInputChannels >= channels && (info == nil || i == d.index) {
+		if x.Name == d.Name && x.MaxInputChannels >= channels && (info == nil || i == d.Index) {
 			info = x
 		}
 	}

@@ -31,7 +31,7 @@ type Device struct {
 	Channels int    // greatest number of input channels
 	Rate     float64
 	Default  bool
-	index    int
+	Index    int // the driver's own number
 }
 
 // ChannelLevel is the level of one channel.
