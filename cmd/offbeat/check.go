@@ -135,7 +135,7 @@ func suits(benches []settings, in inputSpec, rate float64) error {
 // input listens for a moment. The level is NaN if no sample came.
 func (k *checking) input(ctx context.Context, in inputSpec, channels []int) (capture.Format, float64, error) {
 	in.Play = false
-	f := newFeed(in, openInput)
+	f := newFeed(in, openWith(nil))
 	src, err := f.openOne(ctx, channels)
 	if err != nil {
 		return capture.Format{}, 0, err

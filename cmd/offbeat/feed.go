@@ -113,7 +113,7 @@ func (f *feed) run(ctx context.Context) {
 		for _, e := range f.listening() {
 			e.tell(err)
 		}
-		if !f.spec.live() {
+		if !f.spec.live() || errors.Is(err, capture.ErrNoSupport) {
 			return
 		}
 		f.wait(ctx, delay)

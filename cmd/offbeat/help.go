@@ -32,6 +32,9 @@ var helpCommand = &command{
 	name: "help", short: "what a command does and its flags",
 	help: "Usage: offbeat help [COMMAND]\n",
 	run: func(_ context.Context, _ *command, args []string, std stdio) error {
+		if len(args) > 0 && (args[0] == "--help" || args[0] == "-h") {
+			return errHelp
+		}
 		if len(args) == 0 {
 			_, err := io.WriteString(std.out, usage())
 			return err

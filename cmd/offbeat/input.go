@@ -174,8 +174,8 @@ func parseInput(s string) (inputSpec, error) {
 	return inputSpec{Kind: kindRecording, Path: s, Play: true}, nil
 }
 
-// opener opens an input for the given channels (1-based). The one in use is
-// openInput; tests put their own in its place.
+// opener opens an input for the given channels (1-based). The one in use is of
+// openWith; tests put their own in its place.
 type opener func(in inputSpec, channels []int) (capture.Source, error)
 
 // union returns the sorted union of two lists of channels.

@@ -29,7 +29,7 @@ is off: row by row, then in a summary with its uncertainty. Ctrl-C ends a pipe
 and gives the summary of what was heard.
 
 What is in the audio:
-  --hookup two-tone     carrier and local as two tones from an SSB receiver (default)
+  --hookup two-tone     carrier and local as two tones of an SSB receiver (default)
            mixer        one tone at |local − carrier|: no sign
            quadrature   two channels, I and Q
   --sideband usb|lsb    the receiver's sideband (default usb); lsb on quadrature:
@@ -43,7 +43,7 @@ What is in the audio:
                         which of two tones it is
   --search LOW-HIGH     look for tones here only, in Hz: 800-1500
   --wired               the carrier is a house reference on a wire: it does not fade
-  --channel N           channel of the input, from 1 (default 1; quadrature 1,2)
+  --channel N           channel of the input, from 1 (default 1; quadrature: 1,2)
   --sample-rate-error PPM
                         by how much the sample clock is fast, if it is known
   --sample-rate-error-u PPM
@@ -140,7 +140,7 @@ func (m *measuring) input(files []string) error {
 // listen reads the input to its end.
 func (m *measuring) listen(ctx context.Context) (note string, err error) {
 	b := newBench(m.set, m, false)
-	f := newFeed(m.set.Input, openInput)
+	f := newFeed(m.set.Input, openWith(nil))
 	f.add(b.ear)
 	done := make(chan struct{})
 	go func() {

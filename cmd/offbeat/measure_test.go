@@ -373,7 +373,7 @@ func TestSay(t *testing.T) {
 	}
 }
 
-// The help of every command names exactly the flags that it takes.
+// The help of every command names only flags that it takes.
 func TestHelp(t *testing.T) {
 	code, out, _ := runMain("help")
 	if code != 0 {
@@ -393,8 +393,10 @@ func TestHelp(t *testing.T) {
 				t.Errorf("%s, line %d: %d columns", c.name, i+1, n)
 			}
 		}
-		for _, name := range regexp.MustCompile(`--[a-z][a-z-]*`).FindAllString(help, -1) {
-			if _, _, errs := runMain(c.name, name); strings.Contains(errs, "unknown flag") {
+		for _, name := range regexp.MustCompile(`--[a-z][a-z0-9-]*`).FindAllString(help, -1) {
+			// A flag that is known takes the next word or leaves it; either way the
+			// last one is what the command stumbles over, before it does anything.
+			if _, _, errs := runMain(c.name, name, "--never", "--never"); strings.Contains(errs, "unknown flag "+quoted(name)) {
 				t.Errorf("the help of %s tells of %s, which it does not take", c.name, name)
 			}
 		}

@@ -137,12 +137,11 @@ func benchSettings(name string, channels ...int) settings {
 
 // clocked drives a bench without goroutines, on a clock of its own.
 type clocked struct {
-	t    *testing.T
-	b    *bench
-	out  *notebook
-	now  time.Time
-	next int64
-	src  script
+	t   *testing.T
+	b   *bench
+	out *notebook
+	now time.Time
+	src script
 }
 
 func newClocked(t *testing.T) *clocked {

@@ -111,7 +111,7 @@ func runDaemon(ctx context.Context, c *command, args []string, std stdio) error 
 	d.book.Event("", time.Now(), journal.Start, "offbeat "+version, nil)
 	houseCtx, stopHouse := context.WithCancel(context.Background())
 	defer stopHouse()
-	d.house = newHouse(houseCtx, openInput, d.log, d.engage, d.dismiss)
+	d.house = newHouse(houseCtx, openWith(d.log), d.log, d.engage, d.dismiss)
 	d.house.apply(d.cfg.Benches)
 	fmt.Fprintf(std.out, "page     %s/\nmetrics  %s/metrics\njournal  %s\n", server.URL(), server.URL(), d.cfg.Journal)
 

@@ -39,7 +39,7 @@ What is heard:
   --drift-per-day FRACTION
                         ageing of the local: 2ppb
   --white-fm, --flicker-fm, --walk-fm NUMBER
-                        noise of the local: Allan deviation at 1 s, its floor, at 1 s
+                        noise of the local: Allan deviation at 1 s; floor; at 1 s
   --carrier-level DB, --local-level DB
                         in dB of full scale (default -20 and -18)
   --carrier-cn0 DB      carrier over the noise in 1 Hz (default 55)

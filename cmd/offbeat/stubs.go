@@ -1,5 +1,0 @@
-package main
-
-func soundSupported() bool { return false }
-
-var inputsCommand = &command{name: "inputs"}
