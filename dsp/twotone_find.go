@@ -96,7 +96,7 @@ func (e *twoTone) standsAlone(b *band, f float64) bool {
 // them up from the sound that is kept.
 func (e *twoTone) begin(i int64, mid float64) {
 	x, q := e.raw.tail(int64(math.Ceil((mid+0.5+edge)*e.cfg.Rate)), e.acq.need())
-	centres := e.choose(e.acq.search(x, q))
+	centres, _ := e.choose(e.acq.search(x, q))
 	if len(centres) == 0 {
 		return
 	}
@@ -130,11 +130,11 @@ func (e *twoTone) begin(i int64, mid float64) {
 	e.release()
 }
 
-// choose picks the centres of the one or two bands in which the tones are
-// followed, from the lines found.
-func (e *twoTone) choose(lines []found) []float64 {
+// choose picks the one or two tones that are wanted from the lines found, and
+// the centres of the one or two bands in which they are followed.
+func (e *twoTone) choose(lines []found) (centres, tones []float64) {
 	if len(lines) == 0 {
-		return nil
+		return nil, nil
 	}
 	s, d0 := e.cfg.sign(), e.cfg.SetOff()
 	if hint := e.cfg.LocalTone; hint != 0 && !e.asked {
@@ -145,30 +145,30 @@ func (e *twoTone) choose(lines []found) []float64 {
 			}
 		}
 		if near >= 0 {
-			return e.spread(lines[near].f, partner(lines, near, lines[near].f-s*d0))
+			return e.bandsFor(lines[near].f, partner(lines, near, lines[near].f-s*d0))
 		}
 	}
 	// Without a hint the pair must lie where the set-off says; of several, the
 	// strongest.
 	best, at := 0.0, -1
-	var with float64
+	var with *found
 	for k, c := range lines {
 		p := partner(lines, k, c.f+s*d0)
 		if p == nil || math.Abs(p.f-c.f-s*d0) > pull {
 			continue
 		}
 		if v := c.amp * p.amp; v > best {
-			best, at, with = v, k, p.f
+			best, at, with = v, k, p
 		}
 	}
 	if at >= 0 && best > 0.01*lines[0].amp*lines[0].amp {
-		return e.spread(lines[at].f, &found{f: with})
+		return e.bandsFor(lines[at].f, with)
 	}
-	return []float64{lines[0].f}
+	return e.bandsFor(lines[0].f, nil)
 }
 
 // partner returns the line that goes with line k: the strongest within pull of
-// want; failing that, the strongest of all others within reason.
+// want; failing that, the strongest of all others.
 func partner(lines []found, k int, want float64) *found {
 	var far *found
 	for j := range lines {
@@ -185,16 +185,16 @@ func partner(lines []found, k int, want float64) *found {
 	return far
 }
 
-// spread returns one centre between two tones when a band holds both, else one
-// for each.
-func (e *twoTone) spread(f float64, p *found) []float64 {
+// bandsFor returns one centre between two tones when a band holds both, else
+// one for each.
+func (e *twoTone) bandsFor(f float64, p *found) (centres, tones []float64) {
 	switch {
 	case p == nil:
-		return []float64{f}
-	case math.Abs(p.f-f) < 0.85*e.plan.half:
-		return []float64{(f + p.f) / 2}
+		return []float64{f}, []float64{f}
+	case math.Abs(p.f-f) < 1.8*e.plan.half:
+		return []float64{(f + p.f) / 2}, []float64{f, p.f}
 	default:
-		return []float64{f, p.f}
+		return []float64{f, p.f}, []float64{f, p.f}
 	}
 }
 
@@ -218,29 +218,25 @@ func (e *twoTone) lookFar(i int64, mid float64) {
 	if len(lines) < 2 {
 		return
 	}
-	c := e.choose(lines)
-	k := 0
+	_, tones := e.choose(lines)
+	held := 0
 	if !e.tr[0].live {
-		k = 1
+		held = 1
 	}
-	one := e.tr[k]
-	switch {
-	case len(c) == 2 && len(e.bands) == 1:
-		// A partner outside the band.
-		keep := 0
-		if math.Abs(c[1]-one.f) < math.Abs(c[0]-one.f) {
-			keep = 1
-		}
-		if math.Abs(c[keep]-one.f) > 3 {
-			if one.amp > 0.3*lines[0].amp {
-				return
-			}
-			e.restartWith(i, mid)
-			return
-		}
-		e.addBand(c[1-keep], mid, 1-k)
-	case len(c) == 1 && math.Abs(c[0]-one.f) > e.plan.half && lines[0].amp > 2*one.amp:
+	one := e.tr[held]
+	same := false  // the tone that is held is one of those wanted
+	apart := false // and the other lies beyond its band
+	for _, f := range tones {
+		same = same || math.Abs(f-one.f) < 3
+		apart = apart || math.Abs(f-one.band.centre) > one.band.half
+	}
+	louder := lines[0].amp > 2*one.amp
+	if len(tones) == 2 && same && apart || !same && (louder || len(tones) == 2 && one.amp < 0.3*lines[0].amp) {
+		local := e.local
 		e.restartWith(i, mid)
+		if t := &e.tr[0]; e.held() == 1 && t.live && local >= 0 && math.Abs(t.f-one.f) < 1 {
+			e.local = (local + held) % 2 // nothing won, nothing lost: it is track 0 now
+		}
 	}
 }
 
@@ -250,23 +246,4 @@ func (e *twoTone) restartWith(i int64, mid float64) {
 	e.tr = [2]track{}
 	e.count.broken()
 	e.begin(i, mid)
-}
-
-// addBand follows another tone at f in a band of its own, as track k.
-func (e *twoTone) addBand(f, mid float64, k int) {
-	b := newBand(e.plan, f, e.cfg.Hookup == Quadrature, e.raw.first(), int(2.6*e.plan.outRate()))
-	e.raw.prime(b)
-	l := e.lens
-	l.open(b, mid, 1, edge)
-	if l.valid < 0.7 || e.scan(b, 1) < 1 {
-		return
-	}
-	was := e.tr[k]
-	e.take(b, mid, k, 0)
-	if !e.tr[k].whole {
-		e.tr[k] = was
-		e.tr[k].live = false
-		return
-	}
-	e.bands = append(e.bands, b)
 }
