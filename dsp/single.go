@@ -119,7 +119,7 @@ func (s *single) hold(end float64) bool {
 func (s *single) look(mid, span, f float64) bool {
 	l := s.lens
 	l.open(s.tone, mid, span, min(edge, span/2))
-	if l.valid < 0.9 {
+	if l.valid < 0.8 {
 		s.t.whole = false
 		return s.t.live
 	}

@@ -3,7 +3,6 @@
 package sound
 
 import (
-	"fmt"
 	"math"
 	"math/cmplx"
 	"os"
@@ -134,7 +133,7 @@ func listen(t *testing.T, src capture.Source, seconds float64) []float32 {
 	var x []float32
 	for end := time.Now().Add(time.Duration((seconds + 15) * 1e9)); float64(len(x)) < seconds*48000; {
 		if time.Now().After(end) {
-			t.Fatal(fmt.Sprintf("only %d samples came", len(x)))
+			t.Fatalf("only %d samples came", len(x))
 		}
 		if err := src.Read(&b); err != nil {
 			t.Fatal(err)
