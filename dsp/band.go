@@ -80,7 +80,17 @@ func (p *plan) outRate() float64 { return p.rate / float64(p.d1*p.d2) }
 
 // reach is how many input samples a filter output looks to either side, at
 // most.
-func (p *plan) reach() int { return len(p.h1)/2 + 16 + p.d1*(len(p.h2)/2) }
+func (p *plan) reach() int { return len(p.h1)/2 + p.padded() - len(p.h1) + p.d1*(len(p.h2)/2) }
+
+// padded is the length of the first filter with zeros up to the stride of the
+// vector code, which multiplies sixteen at a time. At low rates, where a sample
+// is worth waiting for, there are none.
+func (p *plan) padded() int {
+	if len(p.h1) < 32 {
+		return len(p.h1)
+	}
+	return (len(p.h1) + 15) &^ 15
+}
 
 // gain returns the amplitude response at an offset from the band's centre, Hz,
 // interpolated in a table (good to 1e-6 where the response is flat).
@@ -143,9 +153,7 @@ func newBand(p *plan, f float64, isComplex bool, start int64, keep int) *band {
 	if isComplex {
 		g = 1
 	}
-	// Padded with zeros to the stride of the vector code, which multiplies
-	// sixteen at a time.
-	b.hi, b.hq = make([]float32, (len(p.h1)+15)&^15), make([]float32, (len(p.h1)+15)&^15)
+	b.hi, b.hq = make([]float32, p.padded()), make([]float32, p.padded())
 	for i, v := range p.h1 {
 		s, co := math.Sincos(-2 * math.Pi * turns(uint64(int64(i-c))*b.step))
 		b.hi[i], b.hq[i] = float32(g*v*co), float32(g*v*s)
