@@ -1,6 +1,7 @@
 package main
 
 import (
+	"bufio"
 	"fmt"
 	"io"
 	"math"
@@ -171,7 +172,7 @@ func meanAndDeviation(v []float64) (mean, dev float64) {
 // liveLine is the last line of a terminal, overwritten as the work goes on. A
 // nil liveLine shows nothing.
 type liveLine struct {
-	w     io.Writer
+	w     *bufio.Writer
 	total float64 // seconds expected; 0: not known
 	shown time.Time
 	on    bool
@@ -200,11 +201,12 @@ func (l *liveLine) show(r *dsp.Reading) {
 	if l.total > 0 {
 		fmt.Fprintf(l.w, "  (%.0f %% read)", min(100*(r.T+0.5)/l.total, 100))
 	}
+	l.w.Flush() // an error stays in the writer, where the next flush finds it
 }
 
 func (l *liveLine) clear() {
 	if l != nil && l.on {
-		io.WriteString(l.w, "\r\x1b[K")
+		l.w.WriteString("\r\x1b[K")
 		l.on = false
 	}
 }
