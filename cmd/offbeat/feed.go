@@ -111,7 +111,9 @@ func (f *feed) run(ctx context.Context) {
 			}
 		}
 		for _, e := range f.listening() {
-			e.tell(err)
+			if !e.deaf { // that one has been told already
+				e.tell(err)
+			}
 		}
 		if !f.spec.live() || errors.Is(err, capture.ErrNoSupport) {
 			return

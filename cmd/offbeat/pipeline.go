@@ -95,10 +95,14 @@ func (e *ear) offer(ctx context.Context, s *shared) {
 	}
 }
 
-// tell leaves word of a failure; only the latest counts.
+// tell leaves word of a failure, or with nil of the end. Only the latest word
+// counts, but the end does not hide a failure that nobody has heard of yet.
 func (e *ear) tell(err error) {
 	select {
-	case <-e.trouble:
+	case old := <-e.trouble:
+		if err == nil {
+			err = old
+		}
 	default:
 	}
 	e.trouble <- err
