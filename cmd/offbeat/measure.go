@@ -79,6 +79,7 @@ type measuring struct {
 	live    *liveLine // nil: not on a terminal
 	format  capture.Format
 	summer  *dsp.Summer
+	line    []byte // of the last reading, for its space
 	table   *table
 	failed  error // of the input
 	written error // of the output
@@ -207,7 +208,9 @@ func (m *measuring) opened(f capture.Format, cfg dsp.Config) {
 func (m *measuring) reading(_ time.Time, r dsp.Reading) {
 	m.summer.Add(r)
 	if m.json {
-		m.encode(r)
+		m.line = append(r.AppendJSON(m.line[:0]), '\n')
+		_, err := m.out.Write(m.line)
+		m.check(err)
 		return
 	}
 	if m.table.full(&r) {
