@@ -238,10 +238,18 @@ func measure(l *secondLevel, x []float32) {
 		if sum < 0.99 {
 			continue // then none of them can be at full scale
 		}
-		any := uint32(0) // the top bit tells whether one is
-		for _, v := range part {
+		var any, other uint32 // their top bits tell whether one is
+		rest := part
+		for ; len(rest) >= 4; rest = rest[4:] {
+			any |= math.Float32bits(rest[0])&^top + (top - full)
+			other |= math.Float32bits(rest[1])&^top + (top - full)
+			any |= math.Float32bits(rest[2])&^top + (top - full)
+			other |= math.Float32bits(rest[3])&^top + (top - full)
+		}
+		for _, v := range rest {
 			any |= math.Float32bits(v)&^top + (top - full)
 		}
+		any |= other
 		if any&top == 0 {
 			continue
 		}
