@@ -3,7 +3,6 @@ package sim
 import (
 	"io"
 	"math"
-	"math/cmplx"
 	"math/rand/v2"
 	"sync"
 	"time"
@@ -12,49 +11,49 @@ import (
 )
 
 // Bench makes the sound of a scene. It is a capture.Source; besides, Trim,
-// Trimmed, Seed and Truth may be called from any goroutine.
+// Trimmed, Seed, Config and Truth may be called from any goroutine.
 //
-// Sound is made in steps of about 4 ms (Config of the channel, frequencies and
-// levels are set once a step, fading is interpolated through it), so what is
-// heard does not depend on how it is read. Phases are integers of 2^-64 turns:
-// they stay exact for as long as anyone will listen.
+// Sound is made in steps of 4 ms or less on a grid that divides every second of
+// the sample clock evenly: frequencies and levels are set once a step, fading is
+// interpolated through it. So what is heard does not depend on how it is read.
+// Phases are integers of 2^-64 turns, and every frequency is a whole number of
+// them a sample: what is heard and what Truth says agree for as long as anyone
+// will listen.
 type Bench struct {
-	cfg  Config
-	sign float64
-	step int     // samples a step
-	dts  float64 // true seconds a sample
+	cfg    Config
+	sign   float64 // of the sideband
+	parts  int     // steps a second
+	planes int
+	total  int64   // samples of the whole scene
+	dts    float64 // true seconds a sample
 
-	n     int64 // next sample to be made
-	given int64 // next sample to be given
-	out   [2][]float32
-	left  [2][]float32 // of the present step, not yet given
+	k      int64 // next step to be made
+	n      int64 // its first sample
+	given  int64 // next sample to be given
+	lost   int64 // samples dropped since the last block
+	out    [2][]float32
+	left   [2][]float32 // of the present step, not yet given
+	planar [2][]float32 // out, as long as the present step
 
-	loc  *local
-	ch   *channel
-	prog *programme
-	pc   uint64 // phase of the carrier's tone, as sent
-	pb   uint64 // phase of the beat, as sent
-	g    [4][2]complex128
-	m    []float64 // modulated amplitude, the delayed path's history first
-	late int       // delay of the second path, samples
+	loc    *local
+	ch     *channel
+	prog   *programme
+	pc, pb uint64           // phases of the carrier's tone and of the beat, as sent
+	g      [4][2]complex128 // gains of both paths at the grid's points around the step
+	m      []complex128     // modulated carrier, the delayed path's history first
+	late   int              // delay of the second path, samples
+	made   int              // samples of the step in m
+	rec    *receiver
+	drop   *drops
 
-	noise   *rand.Rand
-	sigma   float64
-	filter  []biquad
-	gain    float64
-	level   float64 // gain control's detector
-	attack  float64
-	decay   float64
-	chance  *rand.Rand
-	nextOut int64 // sample at which the next drop-out begins
-
+	most  int64 // samples a block
 	began time.Time
+	book  ledger
+	told  func(Truth) // called with every second's truth; may be nil
 
 	mu      sync.Mutex
 	trimmed float64
 	truth   Truth
-
-	book ledger
 }
 
 // New returns the bench of a scene, or one line that says what is wrong.
@@ -65,81 +64,56 @@ func New(cfg Config) (*Bench, error) {
 	if err := cfg.complete(); err != nil {
 		return nil, err
 	}
-	b := &Bench{cfg: cfg, sign: 1, step: stepFor(cfg.Rate), dts: 1 / (cfg.Rate * (1 + cfg.ClockError)), gain: 1}
-	if cfg.Sideband == "lsb" {
+	b := &Bench{cfg: cfg, sign: 1, parts: partsFor(&cfg), planes: 1, total: math.MaxInt64, dts: 1 / (cfg.Rate * (1 + cfg.ClockError))}
+	c := &b.cfg
+	if c.Sideband == "lsb" {
 		b.sign = -1
 	}
-	dt := float64(b.step) * b.dts
-	b.loc, b.ch, b.prog = newLocal(&cfg, dt), newChannel(&cfg), newProgramme(&cfg, b.dts)
-	start := rand.New(rand.NewPCG(cfg.Seed, 1))
-	b.pc, b.pb = start.Uint64(), 0
+	if c.Hookup == "quadrature" {
+		b.planes = 2
+	}
+	if n := b.frames(); n > 0 {
+		b.total = n
+	}
+	dt := b.gridTime(1)
+	b.loc, b.ch, b.prog, b.rec = newLocal(c, dt), newChannel(c), newProgramme(c, b.dts), newReceiver(c)
+	start := rand.New(rand.NewPCG(c.Seed, 1))
+	b.pc, b.pb = start.Uint64(), start.Uint64()
 	for i := range b.g {
 		b.g[i][0], b.g[i][1] = b.ch.at(float64(i-1) * dt)
 	}
-	b.late = int(math.Round(cfg.PathDelay * cfg.Rate))
-	b.m = make([]float64, b.late+b.step)
+	longest := int(math.Ceil(c.Rate/float64(b.parts))) + 1
+	b.late = int(math.Round(c.PathDelay * c.Rate))
+	b.m = make([]complex128, b.late+longest)
 	for i := range b.m {
 		b.m[i] = 1
 	}
-	b.setNoise()
-	b.attack = 1 - math.Exp(-b.dts/cfg.AGCAttack)
-	b.decay = 1 - math.Exp(-b.dts/cfg.AGCDecay)
-	b.chance = rand.New(rand.NewPCG(cfg.Seed, 501))
-	b.nextOut = math.MaxInt64
-	b.planDrop()
-	b.out[0], b.out[1] = make([]float32, b.step), make([]float32, b.step)
-	b.book.start(&cfg, b.step)
+	b.out[0], b.out[1] = make([]float32, longest), make([]float32, longest)
+	b.drop = newDrops(c, b.total)
+	b.book.start(c, b.total, b.pb)
+	// Blocks hold half a second at the most, so that Truth keeps up with them.
+	b.most = int64(min(4096, math.Ceil(c.Rate/2)))
+	if c.Pace {
+		b.most = max(1, int64(0.03*c.Rate))
+	}
 	return b, nil
 }
 
-// stepFor chooses the samples a step: about 250 steps a second, and a whole
-// number of them in a second where the rate allows it.
-func stepFor(rate float64) int {
-	if r := int(rate); float64(r) == rate && r >= 250 {
-		for d := range 150 {
-			for _, q := range []int{250 - d, 250 + d} {
-				if q > 0 && r%q == 0 {
-					return r / q
-				}
-			}
-		}
-	}
-	return max(1, int(math.Round(rate/250)))
+// partsFor chooses the steps a second: 250, and for wide spreads as many as keep
+// the interpolation's error about 80 dB below the carrier.
+func partsFor(c *Config) int {
+	return max(1, int(min(max(250, 200*c.SpreadHz), math.Floor(c.Rate))))
 }
 
-// setNoise scales the noise so that C/N0 is as asked at the carrier's pitch,
-// whatever the filter does there.
-func (b *Bench) setNoise() {
-	c := &b.cfg
-	b.noise = rand.New(rand.NewPCG(c.Seed, 401))
-	a := amplitude(c.CarrierDBFS)
-	density := a * a / math.Pow(10, c.CarrierCN0/10) // of the analytic signal
-	b.sigma = math.Sqrt(density * c.Rate / 4)
-	if c.Hookup == "quadrature" {
-		b.sigma = math.Sqrt(density * c.Rate / 2)
-	}
-	if c.White {
-		return
-	}
-	b.filter = []biquad{newBiquad(c.Passband[0], c.Rate, true), newBiquad(c.Passband[0], c.Rate, true),
-		newBiquad(c.Passband[1], c.Rate, false), newBiquad(c.Passband[1], c.Rate, false)}
-	h := 1.0
-	for i := range b.filter {
-		h *= b.filter[i].response(c.Tone / c.Rate)
-	}
-	b.sigma /= max(h, 1e-3)
+// gridTime returns the true time of grid point k, s.
+func (b *Bench) gridTime(k int64) float64 {
+	return float64(k) / float64(b.parts) / (1 + b.cfg.ClockError)
 }
 
-// response returns the section's amplitude at f, a fraction of the rate.
-func (q *biquad) response(f float64) float64 {
-	z := cmplx.Rect(1, -2*math.Pi*f)
-	return cmplx.Abs((complex(q.b0, 0) + complex(q.b1, 0)*z + complex(q.b0, 0)*z*z) / (1 + complex(q.a1, 0)*z + complex(q.a2, 0)*z*z))
-}
-
-func (b *Bench) planDrop() {
-	if b.cfg.DropEvery > 0 {
-		b.nextOut = b.given + int64(1+b.chance.ExpFloat64()*b.cfg.DropEvery*b.cfg.Rate)
-	}
+// gridSample returns the place of grid point k in samples, not rounded.
+func (b *Bench) gridSample(k int64) float64 {
+	p := int64(b.parts)
+	return b.cfg.Rate*float64(k/p) + b.cfg.Rate*float64(k%p)/float64(p)
 }
 
 // Seed returns the seed of everything random.
@@ -149,8 +123,12 @@ func (b *Bench) Seed() uint64 { return b.cfg.Seed }
 func (b *Bench) Config() Config { return b.cfg }
 
 // Trim turns the virtual trimmer: it adds hz to the local's frequency at RF from
-// the next step on.
+// the next step on, its phase continuous. A value that is not finite turns
+// nothing.
 func (b *Bench) Trim(hz float64) {
+	if math.IsNaN(hz) || math.IsInf(hz, 0) {
+		return
+	}
 	b.mu.Lock()
 	b.trimmed += hz
 	b.mu.Unlock()
@@ -163,7 +141,8 @@ func (b *Bench) Trimmed() float64 {
 	return b.trimmed
 }
 
-// Truth returns what was true in the last whole second.
+// Truth returns what was true in the last whole second that was made; T is 0
+// before the first. Sound is made up to one step before it is read.
 func (b *Bench) Truth() Truth {
 	b.mu.Lock()
 	defer b.mu.Unlock()
@@ -172,95 +151,128 @@ func (b *Bench) Truth() Truth {
 
 // Format implements capture.Source.
 func (b *Bench) Format() capture.Format {
-	f := capture.Format{Rate: b.cfg.Rate, Channels: 1, Live: b.cfg.Pace, Encoding: "simulated bench", Frames: b.frames()}
-	if b.cfg.Hookup == "quadrature" {
-		f.Channels = 2
-	}
-	return f
+	return capture.Format{Rate: b.cfg.Rate, Channels: b.planes, Live: b.cfg.Pace, Encoding: "simulated bench", Frames: b.frames()}
 }
 
-func (b *Bench) frames() int64 { return int64(math.Round(b.cfg.Duration * b.cfg.Rate)) }
+// frames returns the length in samples, 0 for an endless scene.
+func (b *Bench) frames() int64 {
+	if b.cfg.Duration == 0 {
+		return 0
+	}
+	return max(1, int64(math.Round(b.cfg.Duration*b.cfg.Rate)))
+}
 
 // Close implements capture.Source.
 func (b *Bench) Close() error { return nil }
 
-// Read implements capture.Source. It never returns an empty block.
+// Read implements capture.Source. Blocks hold at most 4096 samples; at the pace
+// of the clock about 30 ms, and none while a drop-out lasts.
 func (b *Bench) Read(blk *capture.Block) error {
-	ch := b.Format().Channels
-	blk.Reset(ch)
-	want := int64(4096)
-	if b.cfg.Pace {
-		want = max(1, int64(0.03*b.cfg.Rate))
-	}
-	if total := b.frames(); total > 0 {
-		want = min(want, total-b.given)
-		if want <= 0 {
-			return io.EOF
+	blk.Reset(b.planes)
+	for b.given < b.total && b.given >= b.drop.from {
+		n := min(b.drop.to-b.given, int64(math.Ceil(b.cfg.Rate/4)))
+		b.skip(n)
+		b.lost += n
+		if b.given == b.drop.to {
+			b.drop.next()
+		}
+		if b.cfg.Pace {
+			b.wait()
+			return nil
 		}
 	}
-	if b.given >= b.nextOut {
-		blk.Lost = max(1, int64(b.cfg.DropFor*b.cfg.Rate))
-		if total := b.frames(); total > 0 {
-			blk.Lost = min(blk.Lost, total-b.given)
-		}
-		blk.Cause = capture.Simulated
-		b.book.lost += blk.Lost
-		b.skip(blk.Lost)
-		b.planDrop()
-		if total := b.frames(); total > 0 {
-			want = min(want, total-b.given)
-			if want <= 0 {
-				return io.EOF
-			}
-		}
+	want := min(b.most, b.total-b.given, b.drop.from-b.given)
+	if want <= 0 {
+		return io.EOF
 	}
-	want = min(want, b.nextOut-b.given)
 	blk.First = b.given
+	if b.lost > 0 {
+		blk.Lost, blk.Cause, b.lost = b.lost, capture.Simulated, 0
+	}
 	for have := int64(0); have < want; {
 		n := b.take(want - have)
 		for i := range blk.Ch {
 			blk.Ch[i] = append(blk.Ch[i], b.left[i][:n]...)
-			b.left[i] = b.left[i][n:]
 		}
-		have += int64(n)
+		b.use(n)
+		have += n
 	}
-	b.given += want
 	if b.cfg.Pace {
-		b.pace(blk)
+		b.wait()
+		blk.Wall = b.began.Add(b.clock(blk.First))
 	}
 	return nil
 }
 
 // take makes a step if nothing is left and returns how many of at most n
 // samples are there.
-func (b *Bench) take(n int64) int {
+func (b *Bench) take(n int64) int64 {
 	if len(b.left[0]) == 0 {
 		b.make()
 	}
-	return int(min(n, int64(len(b.left[0]))))
+	return min(n, int64(len(b.left[0])))
+}
+
+func (b *Bench) use(n int64) {
+	for i := range b.planes {
+		b.left[i] = b.left[i][n:]
+	}
+	b.given += n
 }
 
 func (b *Bench) skip(n int64) {
-	b.given += n
 	for n > 0 {
 		k := b.take(n)
-		for i := range b.left {
-			if len(b.left[i]) >= k {
-				b.left[i] = b.left[i][k:]
-			}
-		}
-		n -= int64(k)
+		b.use(k)
+		n -= k
 	}
 }
 
-// pace waits until the block's last sample would have been taken.
-func (b *Bench) pace(blk *capture.Block) {
+// clock returns the true time of sample n since the start.
+func (b *Bench) clock(n int64) time.Duration { return time.Duration(float64(n) * b.dts * 1e9) }
+
+// wait waits until the last sample given would have been taken. The reckoning
+// is from the start, so that waiting adds up to no drift.
+func (b *Bench) wait() {
 	if b.began.IsZero() {
-		b.began = time.Now().Add(-time.Duration(float64(blk.First) / b.cfg.Rate * 1e9))
+		b.began = time.Now()
 	}
-	due := b.began.Add(time.Duration(float64(b.given) / b.cfg.Rate * 1e9))
-	if d := time.Until(due); d > 0 {
-		time.Sleep(min(d, 400*time.Millisecond))
+	time.Sleep(time.Until(b.began.Add(b.clock(b.given))))
+}
+
+// drops is the plan of drop-outs: from..to is the next one, in samples. It
+// depends on the scene only, so that whoever needs it makes his own.
+type drops struct {
+	r        *rand.Rand
+	every    float64 // mean, samples
+	long     int64
+	last     int64 // sample that is never dropped: a gap stands before something
+	from, to int64
+}
+
+func newDrops(c *Config, total int64) *drops {
+	d := &drops{r: rand.New(rand.NewPCG(c.Seed, 501)), every: c.DropEvery * c.Rate, long: max(1, int64(c.DropFor*c.Rate)), last: total - 1}
+	d.next()
+	return d
+}
+
+func (d *drops) next() {
+	if d.every > 0 {
+		d.from = d.to + int64(1+d.r.ExpFloat64()*d.every)
+		d.to = min(d.from+d.long, d.last)
 	}
-	blk.Wall = b.began.Add(time.Duration(float64(blk.First) / b.cfg.Rate * 1e9))
+	if d.every == 0 || d.from >= d.last {
+		d.from, d.to = math.MaxInt64, math.MaxInt64
+	}
+}
+
+// between returns how many samples of lo..hi are dropped; lo never goes back.
+func (d *drops) between(lo, hi int64) (n int64) {
+	for {
+		n += max(0, min(hi, d.to)-max(lo, d.from))
+		if d.to >= hi {
+			return n
+		}
+		d.next()
+	}
 }

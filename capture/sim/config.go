@@ -12,14 +12,17 @@
 package sim
 
 import (
+	"errors"
 	"fmt"
 	"math"
-	"strconv"
+	"slices"
 	"strings"
 )
 
 // Config describes a scene. New fills in defaults for zero values where the
-// comment names one.
+// comment names one. Times are true seconds from the start; a tone outside of
+// the band of the samples is not heard. Levels are those at the receiver's
+// output before gain control.
 type Config struct {
 	Rate     float64 `json:"rate"`     // nominal samples a second, 10 to 384000; default 48000
 	Seed     uint64  `json:"seed"`     // 0: chosen at random and told by Seed
@@ -40,12 +43,12 @@ type Config struct {
 	CarrierDBFS float64    `json:"carrier_dbfs"`     // default -20
 	LocalDBFS   float64    `json:"local_dbfs"`       // default -18
 	CarrierCN0  float64    `json:"carrier_cn0_dbhz"` // of the unfaded carrier; default 55
-	Passband    [2]float64 `json:"passband_hz"`      // of the receiver, for the noise; default 300 to 2700
-	White       bool       `json:"white"`            // noise over the whole band instead
+	Passband    [2]float64 `json:"passband_hz"`      // of the receiver, for noise and programme; default 300 to 2700
+	White       bool       `json:"white"`            // no such filter; so always for mixer and quadrature
 
-	Channel   string  `json:"channel"`   // steady (default), quiet, moderate, disturbed, custom
-	SpreadHz  float64 `json:"spread_hz"` // custom: rms Doppler width of each path (half the "Doppler spread" of F.1487)
-	PathDelay float64 `json:"path_delay_s"`
+	Channel   string  `json:"channel"`       // steady (default), quiet, moderate, disturbed, custom
+	SpreadHz  float64 `json:"spread_hz"`     // custom: rms Doppler width of each path, half the "Doppler spread" of F.1487; up to 15
+	PathDelay float64 `json:"path_delay_s"`  // custom: of the second path, to the nearest sample
 	PathShift float64 `json:"path_shift_hz"` // custom: mean Doppler of the second path
 	RiceK     float64 `json:"rice_k"`        // power of a steady part over that of the fading parts, any channel but steady
 
@@ -75,13 +78,23 @@ type Config struct {
 }
 
 // Step moves both tones by By Hz of audio at time At.
-type Step struct{ At, By float64 }
+type Step struct {
+	At float64 `json:"at_s"`
+	By float64 `json:"by_hz"`
+}
 
 // Turn moves the local by By Hz at RF, evenly over Over seconds from At on.
-type Turn struct{ At, By, Over float64 }
+type Turn struct {
+	At   float64 `json:"at_s"`
+	By   float64 `json:"by_hz"`
+	Over float64 `json:"over_s"`
+}
 
 // Spur is a steady tone of the receiver's own, or hum.
-type Spur struct{ Hz, DBFS float64 }
+type Spur struct {
+	Hz   float64 `json:"hz"`
+	DBFS float64 `json:"dbfs"`
+}
 
 // Default is the demonstration: bench "counter" of the workshop at Skerrow hears
 // the 10 MHz demo carrier by one quiet hop; its local is a little high.
@@ -130,9 +143,16 @@ func (c *Config) complete() error {
 	}
 	if c.Channel == "" {
 		c.Channel = "steady"
+		if c.SpreadHz != 0 || c.PathDelay != 0 || c.PathShift != 0 {
+			c.Channel = "custom"
+		}
 	}
 	if p, ok := presets[c.Channel]; ok {
-		c.PathDelay, c.SpreadHz, c.PathShift = p[0], p[1]/2, 0
+		want := [3]float64{p[1] / 2, p[0], 0}
+		if got := [3]float64{c.SpreadHz, c.PathDelay, c.PathShift}; got != want && got != [3]float64{} {
+			return fmt.Errorf("simulated bench: channel %s sets spread, path delay and path shift itself: leave them out, or choose channel custom", c.Channel)
+		}
+		c.SpreadHz, c.PathDelay, c.PathShift = want[0], want[1], want[2]
 	}
 	if c.Hookup != "two-tone" {
 		c.White = true // a mixer's output or an IQ baseband has no receiver's audio filter
@@ -141,36 +161,24 @@ func (c *Config) complete() error {
 }
 
 func (c *Config) check() error {
-	in := func(what string, v, lo, hi float64) error {
-		if !(v >= lo && v <= hi) {
-			return fmt.Errorf("simulated bench: %s %g: must be %g to %g", what, v, lo, hi)
-		}
-		return nil
-	}
-	for _, x := range []struct {
-		what      string
-		v, lo, hi float64
-	}{
-		{"rate", c.Rate, 10, 384000}, {"offset", c.Offset, -1e5, 1e5}, {"clock error", c.ClockError, -0.01, 0.01},
-		{"carrier", c.Carrier, 1, 1e12}, {"local", c.Local, 1, 1e12}, {"carrier level", c.CarrierDBFS, -140, 0}, {"local level", c.LocalDBFS, -140, 0},
-		{"C/N0", c.CarrierCN0, -20, 160}, {"spread", c.SpreadHz, 0, 5}, {"path delay", c.PathDelay, 0, 0.02}, {"depth", c.Depth, 0, 1},
-		{"rice k", c.RiceK, 0, 1e9}, {"duration", c.Duration, 0, 1e9}, {"AGC attack", c.AGCAttack, 1e-4, 10}, {"AGC decay", c.AGCDecay, 1e-4, 100},
-		{"drop-out length", c.DropFor, 0, 1e5}, {"drop-out interval", c.DropEvery, 0, 1e9}, {"drift", c.Drift, -1, 1}, {"receiver drift", c.ReceiverDrift, -1e3, 1e3},
-		{"dc", c.DC, -1, 1},
-	} {
-		if err := in(x.what, x.v, x.lo, x.hi); err != nil {
-			return err
-		}
-	}
 	switch {
 	case c.Hookup != "two-tone" && c.Hookup != "mixer" && c.Hookup != "quadrature":
 		return fmt.Errorf("simulated bench: hook-up %q: must be two-tone, mixer or quadrature", c.Hookup)
+	case c.Baseband && c.Hookup != "quadrature":
+		return fmt.Errorf("simulated bench: baseband with hook-up %s: only quadrature has one", c.Hookup)
 	case c.Sideband != "usb" && c.Sideband != "lsb":
 		return fmt.Errorf("simulated bench: sideband %q: must be usb or lsb", c.Sideband)
-	case presets[c.Channel] == [2]float64{} && c.Channel != "steady" && c.Channel != "custom":
+	case !slices.Contains(Channels, c.Channel):
 		return fmt.Errorf("simulated bench: channel %q: must be %s", c.Channel, strings.Join(Channels, ", "))
-	case c.Hookup == "two-tone" && !(c.Tone > 0 && c.Tone < c.Rate/2):
-		return fmt.Errorf("simulated bench: tone %s Hz: must lie below half the sample rate, %g Hz", strconv.FormatFloat(c.Tone, 'g', -1, 64), c.Rate/2)
+	}
+	if err := c.checkRanges(); err != nil {
+		return err
+	}
+	switch low := c.Baseband && c.Tone > -c.Rate/2; {
+	case c.Channel == "custom" && c.SpreadHz == 0:
+		return errors.New("simulated bench: channel custom without a spread: set one above 0 Hz, or choose channel steady")
+	case (c.Hookup == "two-tone" || c.Baseband) && !(c.Tone < c.Rate/2 && (c.Tone > 0 || low)):
+		return fmt.Errorf("simulated bench: tone %g Hz: must lie below half the sample rate, %g Hz", c.Tone, c.Rate/2)
 	case !c.White && !(c.Passband[0] > 0 && c.Passband[0] < c.Passband[1]):
 		return fmt.Errorf("simulated bench: passband %g to %g Hz: must rise from above 0", c.Passband[0], c.Passband[1])
 	}
@@ -178,6 +186,44 @@ func (c *Config) check() error {
 		c.Passband[1] = 0.45 * c.Rate
 		if c.Passband[0] >= c.Passband[1] {
 			c.White = true
+		}
+	}
+	return nil
+}
+
+// checkRanges refuses every number that is out of its range or not finite.
+func (c *Config) checkRanges() error {
+	type number struct {
+		what      string
+		v, lo, hi float64
+	}
+	all := []number{
+		{"rate", c.Rate, 10, 384000}, {"carrier", c.Carrier, 1, 1e12}, {"local", c.Local, 1, 1e12}, {"tone", c.Tone, -1e6, 1e6},
+		{"offset", c.Offset, -1e5, 1e5}, {"drift", c.Drift, -1, 1}, {"receiver drift", c.ReceiverDrift, -1e3, 1e3},
+		{"white FM", c.LocalWhiteFM, 0, 1e-3}, {"flicker FM", c.LocalFlickerFM, 0, 1e-3}, {"walk FM", c.LocalWalkFM, 0, 1e-3},
+		{"carrier level", c.CarrierDBFS, -140, 0}, {"local level", c.LocalDBFS, -140, 0}, {"C/N0", c.CarrierCN0, -20, 160},
+		{"passband", c.Passband[0], 0, 1e6}, {"passband", c.Passband[1], 0, 1e6},
+		{"spread", c.SpreadHz, 0, 15}, {"path delay", c.PathDelay, 0, 0.02}, {"path shift", c.PathShift, -50, 50}, {"rice k", c.RiceK, 0, 1e9},
+		{"depth", c.Depth, 0, 1}, {"AGC attack", c.AGCAttack, 1e-4, 10}, {"AGC decay", c.AGCDecay, 1e-4, 100}, {"dc", c.DC, -1, 1},
+		{"clock error", c.ClockError, -0.01, 0.01}, {"drop-out interval", c.DropEvery, 0, 1e9}, {"drop-out length", c.DropFor, 0, 3600},
+		{"duration", c.Duration, 0, 1e9},
+	}
+	const ever = 1e10
+	for _, s := range append(slices.Clone(c.CarrierAway), c.LocalAway...) {
+		all = append(all, number{"time away, from", s[0], 0, ever}, number{"time away, to", s[1], s[0], ever})
+	}
+	for _, s := range c.Retunes {
+		all = append(all, number{"time of a retune", s.At, 0, ever}, number{"retune", s.By, -1e6, 1e6})
+	}
+	for _, s := range c.Trims {
+		all = append(all, number{"time of a turn", s.At, 0, ever}, number{"turn", s.By, -1e6, 1e6}, number{"length of a turn", s.Over, 0, ever})
+	}
+	for _, s := range c.Spurs {
+		all = append(all, number{"spur", s.Hz, -c.Rate / 2, c.Rate / 2}, number{"spur level", s.DBFS, -200, 0})
+	}
+	for _, x := range all {
+		if !(x.v >= x.lo && x.v <= x.hi) {
+			return fmt.Errorf("simulated bench: %s %g: must be %g to %g", x.what, x.v, x.lo, x.hi)
 		}
 	}
 	return nil

@@ -5,51 +5,80 @@ import (
 	"math/cmplx"
 )
 
-// turns converts a frequency in turns a sample to the integer step.
-func turns(f float64) uint64 { return uint64(int64((f-math.Round(f))*(1<<62))) << 2 }
-
-// angle returns the phase p in radians.
-func angle(p uint64) float64 { return float64(int64(p)) / (1 << 63) * math.Pi }
+// step is what is constant, or sampled once, in a step of sound.
+type step struct {
+	n              int64 // samples
+	carrier, beat  pitch
+	hearC, hearL   bool
+	retuned        bool
+	before, after  complex128 // the carrier's fading at both ends
+	start, halfway float64    // samples from the first one: the grid's point, and the middle of the second
+}
 
 // make makes the next step of sound.
 func (b *Bench) make() {
 	c := &b.cfg
-	t := float64(b.n) * b.dts
-	dt := float64(b.step) * b.dts
-	fl := b.loc.step(t) + b.Trimmed()
-	beat := c.Local - c.Carrier + fl
-	common := c.ReceiverDrift * t / 60
-	retuned := false
+	t, dt := b.gridTime(b.k), b.gridTime(1)
+	end := int64(math.Ceil(b.gridSample(b.k+1) - 1e-6))
+	s := step{n: end - b.n, before: b.g[1][0] + b.g[1][1], after: b.g[2][0] + b.g[2][1], start: b.gridSample(b.k) - float64(b.n)}
+	s.halfway = b.gridSample(b.k-b.k%int64(b.parts)) + c.Rate/2 - float64(b.n)
+
+	beat := c.Local - c.Carrier + b.loc.step(t) + b.Trimmed()
+	common := c.ReceiverDrift * (t + dt/2) / 60
 	for _, r := range c.Retunes {
-		if t >= r.At {
+		if t+dt/2 >= r.At {
 			common += r.By
-			retuned = retuned || t-dt < r.At
+			s.retuned = s.retuned || t-dt/2 < r.At
 		}
 	}
-	stepC, stepB := turns((c.Tone+common)*b.dts), turns(beat*b.dts)
-	hearC, hearL := !inside(c.CarrierAway, t), !inside(c.LocalAway, t)
-
-	copy(b.m, b.m[b.step:])
-	if b.prog.on {
-		b.prog.fill(b.m[b.late:], t)
+	s.carrier, s.beat = pitchOf((c.Tone+common)*b.dts), pitchOf(beat*b.dts)
+	s.hearC, s.hearL = !inside(c.CarrierAway, t+dt/2), !inside(c.LocalAway, t+dt/2)
+	if b.product() {
+		s.hearL = s.hearL && math.Abs(beat*b.dts) < 0.5
+	} else {
+		s.hearC = s.hearC && b.audible(c.Tone+common)
+		s.hearL = s.hearL && b.audible(c.Tone+common+b.sign*beat)
 	}
-	b.sound(stepC, stepB, hearC, hearL)
-	b.finish(t)
 
-	h0, h1 := b.g[1][0]+b.g[1][1], b.g[2][0]+b.g[2][1]
-	if t, done := b.book.add(entry{beat: beat, stepB: stepB, stepC: stepC, h0: h0, h1: h1, carrier: hearC, local: hearL, retuned: retuned}, b); done {
+	for i := range b.planar {
+		b.planar[i] = b.out[i][:s.n]
+	}
+	if b.prog.on {
+		copy(b.m, b.m[b.made:b.made+b.late])
+		b.made = int(s.n)
+		b.prog.fill(b.m[b.late:b.late+b.made], float64(b.n)*b.dts)
+	}
+	b.sound(&s)
+	b.rec.hear(b.planar[:b.planes])
+
+	if t, done := b.book.add(&s, b); done {
 		b.mu.Lock()
+		t.Trimmed = b.trimmed
 		b.truth = t
 		b.mu.Unlock()
+		if b.told != nil {
+			b.told(t)
+		}
 	}
-	b.pc += stepC * uint64(b.step)
-	b.pb += stepB * uint64(b.step)
-	b.n += int64(b.step)
+	b.pc += uint64(s.carrier.part) * uint64(s.n)
+	b.pb += uint64(s.beat.part) * uint64(s.n)
+	b.n = end
+	b.k++
 	copy(b.g[:], b.g[1:])
 	if b.ch.two {
-		b.g[3][0], b.g[3][1] = b.ch.at(float64(b.n)*b.dts + 2*dt)
+		b.g[3][0], b.g[3][1] = b.ch.at(b.gridTime(b.k + 2))
 	}
-	b.left = b.out
+	b.left = b.planar
+}
+
+// product says that the sound is the beat itself, not two tones.
+func (b *Bench) product() bool { return b.cfg.Hookup != "two-tone" && !b.cfg.Baseband }
+
+// audible says whether a tone lies in the band of the samples: what does not is
+// filtered off before sampling, and is not folded into it.
+func (b *Bench) audible(hz float64) bool {
+	f := hz * b.dts
+	return f < 0.5 && (f > 0 || b.planes == 2 && f > -0.5)
 }
 
 func inside(spans [][2]float64, t float64) bool {
@@ -61,101 +90,56 @@ func inside(spans [][2]float64, t float64) bool {
 	return false
 }
 
-// cubic is a Catmull-Rom piece through the middle two of four values.
-func cubic(p0, p1, p2, p3 complex128, u float64) complex128 {
-	c := func(v float64) complex128 { return complex(v, 0) }
-	a := -0.5*p0 + 1.5*p1 - 1.5*p2 + 0.5*p3
-	b := p0 - 2.5*p1 + 2*p2 - 0.5*p3
-	d := 0.5 * (p2 - p0)
-	return ((a*c(u)+b)*c(u)+d)*c(u) + p1
+// cubic is the Catmull-Rom piece through the middle two of four values.
+type cubic [4]complex128
+
+func newCubic(p0, p1, p2, p3 complex128) cubic {
+	return cubic{p1, 0.5 * (p2 - p0), p0 - 2.5*p1 + 2*p2 - 0.5*p3, -0.5*p0 + 1.5*p1 - 1.5*p2 + 0.5*p3}
+}
+
+func (q *cubic) at(u float64) complex128 {
+	return complex(real(q[0])+u*(real(q[1])+u*(real(q[2])+u*real(q[3]))),
+		imag(q[0])+u*(imag(q[1])+u*(imag(q[2])+u*imag(q[3]))))
 }
 
 // sound writes carrier and local, without noise, to the planes.
-func (b *Bench) sound(stepC, stepB uint64, hearC, hearL bool) {
+func (b *Bench) sound(s *step) {
 	c := &b.cfg
 	ac, al := amplitude(c.CarrierDBFS), amplitude(c.LocalDBFS)
-	if !hearC {
+	if !s.hearC {
 		ac = 0
 	}
-	if !hearL {
+	if !s.hearL {
 		al = 0
 	}
-	rotB := cmplx.Rect(1, angle(stepB))
-	eb := cmplx.Rect(1, angle(b.pb))
-	rotC := cmplx.Rect(1, angle(stepC))
-	ec := cmplx.Rect(1, angle(b.pc))
-	steady := !b.ch.two
-	var env complex128
-	two := c.Hookup == "two-tone" || c.Baseband
-	for i := range b.out[0] {
-		if steady {
-			env = complex(real(b.g[1][0])*b.m[b.late+i], 0)
-		} else {
-			u := float64(i) / float64(b.step)
-			g1 := cubic(b.g[0][0], b.g[1][0], b.g[2][0], b.g[3][0], u)
-			g2 := cubic(b.g[0][1], b.g[1][1], b.g[2][1], b.g[3][1], u)
-			env = g1*complex(b.m[b.late+i], 0) + g2*complex(b.m[i], 0)
+	rotB, eb := cmplx.Rect(1, angle(uint64(s.beat.part))), cmplx.Rect(1, angle(b.pb))
+	rotC, ec := cmplx.Rect(1, angle(uint64(s.carrier.part))), cmplx.Rect(1, angle(b.pc))
+	product, lower := b.product(), b.sign < 0
+	if product && !s.hearL {
+		ac = 0
+	}
+	q1 := newCubic(b.g[0][0], b.g[1][0], b.g[2][0], b.g[3][0])
+	q2 := newCubic(b.g[0][1], b.g[1][1], b.g[2][1], b.g[3][1])
+	du := float64(b.parts) / c.Rate
+	x, y := b.planar[0], b.planar[1]
+	for i := range x {
+		env := b.m[b.late+i]
+		if b.ch.two {
+			u := (float64(i) - s.start) * du
+			env = q1.at(u)*env + q2.at(u)*b.m[i]
 		}
-		var z complex128
 		beat := eb
-		if b.sign < 0 {
+		if lower {
 			env, beat = cmplx.Conj(env), cmplx.Conj(eb)
 		}
-		if two {
-			z = ec * (complex(ac, 0)*env + complex(al, 0)*beat)
-		} else {
+		var z complex128
+		if product {
 			z = complex(ac, 0) * cmplx.Conj(env) * beat
-			if !hearL {
-				z = 0
-			}
+		} else {
+			z = ec * (complex(ac, 0)*env + complex(al, 0)*beat)
 		}
-		b.out[0][i], b.out[1][i] = float32(real(z)), float32(imag(z))
+		x[i], y[i] = float32(real(z)), float32(imag(z))
 		eb *= rotB
 		ec *= rotC
-	}
-}
-
-// finish adds the receiver: noise, spurs, gain control, offset.
-func (b *Bench) finish(t float64) {
-	c := &b.cfg
-	planes := 1
-	if c.Hookup == "quadrature" {
-		planes = 2
-	}
-	for k := range planes {
-		x := b.out[k]
-		for i := range x {
-			v := b.sigma * b.noise.NormFloat64()
-			if k == 0 {
-				for j := range b.filter {
-					v = b.filter[j].next(v)
-				}
-			}
-			x[i] += float32(v)
-		}
-		for _, s := range c.Spurs {
-			a := amplitude(s.DBFS)
-			for i := range x {
-				_, f := math.Modf(s.Hz * (t + float64(i)*b.dts))
-				x[i] += float32(a * math.Cos(2*math.Pi*(f-0.25*float64(k))))
-			}
-		}
-		if c.AGC && k == 0 {
-			const target = 0.25
-			for i, v := range x {
-				d := math.Abs(float64(v)) - b.level
-				if d > 0 {
-					b.level += b.attack * d
-				} else {
-					b.level += b.decay * d
-				}
-				x[i] = v * float32(target/max(b.level, 1e-4))
-			}
-		}
-		if c.DC != 0 {
-			for i := range x {
-				x[i] += float32(c.DC)
-			}
-		}
 	}
 }

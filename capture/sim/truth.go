@@ -13,9 +13,9 @@ type Truth struct {
 	Received    float64 `json:"beat_received_hz"`  // Beat - Shift
 	CarrierTone float64 `json:"carrier_tone_hz"`   // as measured with the nominal clock, Doppler included
 	LocalTone   float64 `json:"local_tone_hz"`
-	CarrierDBFS float64 `json:"carrier_dbfs"` // with fading, before gain control
+	CarrierDBFS float64 `json:"carrier_dbfs"` // mean power of the carrier alone with fading, before gain control; -300 and less: none
 	LocalDBFS   float64 `json:"local_dbfs"`
-	Phase       float64 `json:"phase_cycles"`  // of the beat as sent, at T, from the start
+	Phase       float64 `json:"phase_cycles"`  // of the beat as sent, at T; the start's fraction of a turn included
 	Carrier     bool    `json:"carrier_heard"` // all through the second
 	Local       bool    `json:"local_heard"`
 	Retuned     bool    `json:"retuned"`
@@ -23,81 +23,75 @@ type Truth struct {
 	Trimmed     float64 `json:"trimmed_hz"` // turns by hand so far
 }
 
-// entry is one step for the ledger.
-type entry struct {
-	beat           float64
-	stepB, stepC   uint64
-	h0, h1         complex128
-	carrier, local bool
-	retuned        bool
-}
-
 // ledger sums steps into seconds.
 type ledger struct {
-	steps  int // a second
-	n      int
+	n      int // steps so far
 	second int64
-	lost   int64
-	cycles float64 // of the beat, at the start of the second
+	first  int64 // sample
+	total  count // turns of the beat, the first phase included
+	phase  float64
+	drop   *drops
 
-	sumB, sumC, half float64
-	cross            complex128
-	power            float64
-	t                Truth
+	beat, tone     count
+	cross          complex128
+	power          float64
+	local, samples int64
+	t              Truth
 }
 
-func (l *ledger) start(c *Config, step int) {
-	l.steps = max(1, int(math.Round(c.Rate/float64(step))))
-	l.reset()
-}
-
-func (l *ledger) reset() {
-	l.n, l.sumB, l.sumC, l.half, l.cross, l.power = 0, 0, 0, 0, 0, 0
+func (l *ledger) start(c *Config, total int64, phase uint64) {
+	l.drop = newDrops(c, total)
+	l.total.part = phase
 	l.t = Truth{Carrier: true, Local: true}
 }
 
 // add takes a step; true when it completes a second.
-func (l *ledger) add(e entry, b *Bench) (Truth, bool) {
-	step := float64(b.step)
-	cycB := float64(int64(e.stepB)) / (1 << 63) / 2 * step
-	cycC := float64(int64(e.stepC)) / (1 << 63) / 2 * step
-	if l.n < l.steps/2 {
-		l.half += cycB
-	} else if l.steps%2 == 1 && l.n == l.steps/2 {
-		l.half += cycB / 2
+func (l *ledger) add(s *step, b *Bench) (Truth, bool) {
+	if l.n == b.parts/2 {
+		// Linear within the step: the middle may fall between samples.
+		l.phase = l.total.turns() + (float64(s.beat.whole)+float64(s.beat.part)/(1<<64))*s.halfway
 	}
-	l.sumB += cycB
-	l.sumC += cycC
-	l.cross += e.h1 * cmplx.Conj(e.h0)
-	l.power += (real(e.h0)*real(e.h0) + imag(e.h0)*imag(e.h0) + real(e.h1)*real(e.h1) + imag(e.h1)*imag(e.h1)) / 2
-	l.t.Carrier = l.t.Carrier && e.carrier
-	l.t.Local = l.t.Local && e.local
-	l.t.Retuned = l.t.Retuned || e.retuned
 	l.n++
-	if l.n < l.steps {
+	l.samples += s.n
+	l.total.add(s.beat, s.n)
+	l.beat.add(s.beat, s.n)
+	l.tone.add(s.carrier, s.n)
+	l.cross += s.after * cmplx.Conj(s.before)
+	if s.hearC {
+		l.power += (real(s.before)*real(s.before) + imag(s.before)*imag(s.before) + real(s.after)*real(s.after) + imag(s.after)*imag(s.after)) / 2
+	}
+	if s.hearL {
+		l.local++
+	}
+	l.t.Carrier = l.t.Carrier && s.hearC
+	l.t.Local = l.t.Local && s.hearL
+	l.t.Retuned = l.t.Retuned || s.retuned
+	if l.n < b.parts {
 		return Truth{}, false
 	}
-	t := l.t
-	c := &b.cfg
-	span := float64(l.steps) * step // samples
+	t := l.close(b)
+	*l = ledger{second: l.second + 1, first: l.first + l.samples, total: l.total, drop: l.drop, t: Truth{Carrier: true, Local: true}}
+	return t, true
+}
+
+// close returns the truth of a whole second.
+func (l *ledger) close(b *Bench) Truth {
+	c, t := &b.cfg, l.t
+	beat, tone := l.beat.turns()/float64(l.samples), l.tone.turns()/float64(l.samples) // turns a sample
 	t.T = float64(l.second) + 0.5
-	t.Beat = l.sumB / (span * b.dts)
-	if l.power > 0 {
-		t.Shift = cmplx.Phase(l.cross) / (2 * math.Pi * step * b.dts)
+	t.Beat = beat / b.dts
+	if b.ch.two {
+		t.Shift = cmplx.Phase(l.cross) / (2 * math.Pi * b.gridTime(1))
 	}
 	t.Received = t.Beat - t.Shift
-	perSecond := c.Rate / span // cycles of the span to nominal hertz
-	if c.Hookup == "two-tone" || c.Baseband {
-		t.CarrierTone = (l.sumC)*perSecond + b.sign*t.Shift/(1+c.ClockError)
-		t.LocalTone = (l.sumC + b.sign*l.sumB) * perSecond
+	if !b.product() {
+		t.CarrierTone = tone*c.Rate + b.sign*t.Shift/(1+c.ClockError)
+		t.LocalTone = (tone + b.sign*beat) * c.Rate
 	}
-	t.CarrierDBFS = c.CarrierDBFS + 10*math.Log10(max(l.power/float64(l.steps), 1e-30))
-	t.LocalDBFS = c.LocalDBFS
-	t.Phase = l.cycles + l.half
-	t.Lost, l.lost = l.lost, 0
-	t.Trimmed = b.Trimmed()
-	l.cycles += l.sumB
-	l.second++
-	l.reset()
-	return t, true
+	decibel := func(share float64) float64 { return 10 * math.Log10(max(share/float64(b.parts), 1e-30)) }
+	t.CarrierDBFS = c.CarrierDBFS + decibel(l.power)
+	t.LocalDBFS = c.LocalDBFS + decibel(float64(l.local))
+	t.Phase = l.phase
+	t.Lost = l.drop.between(l.first, l.first+l.samples)
+	return t
 }

@@ -19,9 +19,10 @@ type WriteOptions struct {
 }
 
 // Write writes a scene as a WAV file, and its truth as JSON lines: first
-// {"scene": configuration}, then one Truth a second. The scene must have a
-// duration; it is made as fast as possible. Drop-outs are cut out of the WAV
-// file, as a recorder that loses samples would, and stand in the truth.
+// {"scene": configuration}, seed and defaults filled in, then one Truth for each
+// whole second. The scene must have a duration and no drop-outs, for which a WAV
+// file has no place; it is made as fast as possible. Samples beyond full scale
+// are clipped, integer ones rounded to even.
 func Write(ctx context.Context, wav, truth io.Writer, cfg Config, opt WriteOptions) error {
 	cfg.Pace = false
 	b, err := New(cfg)
@@ -34,11 +35,11 @@ func Write(ctx context.Context, wav, truth io.Writer, cfg Config, opt WriteOptio
 	if opt.Bits == 0 {
 		opt.Bits = 16
 	}
-	if opt.Bits != 16 && opt.Bits != 24 && opt.Bits != 32 {
-		return fmt.Errorf("simulated bench: %d bits: must be 16, 24 or 32 (float)", opt.Bits)
-	}
 	if cfg.DropEvery > 0 {
 		return errors.New("simulated bench: a WAV file cannot hold drop-outs: its time line has no gaps")
+	}
+	if opt.Bits != 16 && opt.Bits != 24 && opt.Bits != 32 {
+		return fmt.Errorf("simulated bench: %d bits: must be 16, 24 or 32 (float)", opt.Bits)
 	}
 	w := bufio.NewWriterSize(wav, 1<<18)
 	w.Write(header(b, opt.Bits))
@@ -46,57 +47,64 @@ func Write(ctx context.Context, wav, truth io.Writer, cfg Config, opt WriteOptio
 	if err := enc.Encode(map[string]any{"scene": b.Config()}); err != nil {
 		return err
 	}
+	var told error
+	b.told = func(t Truth) {
+		if told == nil {
+			told = enc.Encode(t)
+		}
+	}
 	var blk capture.Block
 	var buf []byte
-	last := 0.0
 	for {
 		if err := ctx.Err(); err != nil {
 			return err
 		}
-		err := b.Read(&blk)
-		if err == io.EOF {
-			break
-		}
-		if err != nil {
+		switch err := b.Read(&blk); {
+		case err == io.EOF:
+			if b.frames()*int64(b.planes*opt.Bits/8)%2 == 1 {
+				w.WriteByte(0) // chunks are padded to even length
+			}
+			return w.Flush()
+		case err != nil:
 			return err
+		case told != nil:
+			return told
 		}
 		buf = encode(buf[:0], blk.Ch, opt.Bits)
 		if _, err := w.Write(buf); err != nil {
 			return err
 		}
-		if t := b.Truth(); t.T > last {
-			last = t.T
-			if err := enc.Encode(t); err != nil {
-				return err
-			}
-		}
 	}
-	return w.Flush()
 }
 
-// header is a canonical WAV header. Sizes beyond 4 GiB become 0xFFFFFFFF, which
-// readers take for "to the end of the file".
+// header is a canonical WAV header; floating point has its format chunk extended
+// and a fact chunk, as the format's description asks of everything but PCM. Sizes
+// beyond 4 GiB become 0xFFFFFFFF, which readers take for "to the end of the file".
 func header(b *Bench, bits int) []byte {
-	ch := b.Format().Channels
+	le := binary.LittleEndian
+	ch := b.planes
 	align := ch * bits / 8
 	size := uint64(b.frames()) * uint64(align)
 	clip := func(v uint64) uint32 { return uint32(min(v, math.MaxUint32)) }
-	h := []byte("RIFF")
-	h = binary.LittleEndian.AppendUint32(h, clip(size+36))
-	h = append(h, "WAVEfmt "...)
-	h = binary.LittleEndian.AppendUint32(h, 16)
-	format := uint16(1)
+	format, length := uint16(1), uint32(16)
 	if bits == 32 {
-		format = 3
+		format, length = 3, 18
 	}
-	h = binary.LittleEndian.AppendUint16(h, format)
-	h = binary.LittleEndian.AppendUint16(h, uint16(ch))
-	h = binary.LittleEndian.AppendUint32(h, uint32(math.Round(b.cfg.Rate)))
-	h = binary.LittleEndian.AppendUint32(h, uint32(math.Round(b.cfg.Rate))*uint32(align))
-	h = binary.LittleEndian.AppendUint16(h, uint16(align))
-	h = binary.LittleEndian.AppendUint16(h, uint16(bits))
+	h := append([]byte("WAVEfmt "), byte(length), 0, 0, 0)
+	h = le.AppendUint16(h, format)
+	h = le.AppendUint16(h, uint16(ch))
+	h = le.AppendUint32(h, uint32(math.Round(b.cfg.Rate)))
+	h = le.AppendUint32(h, uint32(math.Round(b.cfg.Rate))*uint32(align))
+	h = le.AppendUint16(h, uint16(align))
+	h = le.AppendUint16(h, uint16(bits))
+	if bits == 32 {
+		h = append(h, 0, 0)
+		h = append(h, "fact\x04\x00\x00\x00"...)
+		h = le.AppendUint32(h, clip(uint64(b.frames())))
+	}
 	h = append(h, "data"...)
-	return binary.LittleEndian.AppendUint32(h, clip(size))
+	h = le.AppendUint32(h, clip(size))
+	return append(le.AppendUint32([]byte("RIFF"), clip(uint64(len(h))+size+size%2)), h...)
 }
 
 // encode interleaves the planes.
