@@ -75,12 +75,18 @@ func (e *twoTone) standsAlone(b *band, f float64) bool {
 		if d0 := math.Abs(e.cfg.SetOff()); d0 >= 10 && math.Abs(d-d0) < 5 {
 			continue
 		}
-		if hint := e.cfg.LocalTone; hint != 0 && e.local < 0 && math.Abs(f+b.centre-hint) < 2 {
+		hint := e.cfg.LocalTone
+		told := hint != 0 && !e.asked && e.local < 0
+		if told && math.Abs(f+b.centre-hint) < 2 {
 			continue
 		}
+		// Where the local was said to be here, or the pair is remembered at
+		// this distance, the other tone may well lie where hum would.
+		expected := told && math.Abs(x.f+b.centre-hint) < 2 ||
+			e.memory.known && math.Abs(d-math.Abs(e.memory.local-e.memory.carrier)) < 2
 		for _, hum := range []float64{50, 60} {
 			m := math.Round(d / hum)
-			if m >= 1 && math.Abs(d-m*hum) < 0.5 {
+			if m >= 1 && math.Abs(d-m*hum) < 0.5 && !expected {
 				return false
 			}
 		}

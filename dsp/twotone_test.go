@@ -336,7 +336,7 @@ func TestNoHintIsUnsure(t *testing.T) {
 // Weak beside strong, close and far, with a hint: every second the right beat.
 func TestUnequalLevels(t *testing.T) {
 	for _, dB := range []float64{-40, -20, 0, 20, 30} {
-		for _, sep := range []float64{2.3, 4, -20, 33.3, 90, -130, 170, -260, 800} {
+		for _, sep := range []float64{2.3, 4, -20, 33.3, 50, 90, 120.2, -130, 170, -260, 800} {
 			s := scene{rate: 8000, seconds: 9, carrier: 1300.3, local: 1300.3 + sep, cn0: 65, seed: 3, ampC: 0.1, ampL: 0.1 * math.Pow(10, dB/20)}
 			if dB > 10 {
 				s.ampC, s.ampL = s.ampC/10, s.ampL/10
