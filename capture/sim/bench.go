@@ -25,7 +25,8 @@ type Bench struct {
 	parts  int     // steps a second
 	planes int
 	total  int64   // samples of the whole scene
-	dts    float64 // true seconds a sample
+	rate   float64 // samples a true second
+	dts    float64 // its inverse
 
 	k      int64 // next step to be made
 	n      int64 // its first sample
@@ -64,7 +65,8 @@ func New(cfg Config) (*Bench, error) {
 	if err := cfg.complete(); err != nil {
 		return nil, err
 	}
-	b := &Bench{cfg: cfg, sign: 1, parts: partsFor(&cfg), planes: 1, total: math.MaxInt64, dts: 1 / (cfg.Rate * (1 + cfg.ClockError))}
+	b := &Bench{cfg: cfg, sign: 1, parts: partsFor(&cfg), planes: 1, total: math.MaxInt64, rate: cfg.Rate * (1 + cfg.ClockError)}
+	b.dts = 1 / b.rate
 	c := &b.cfg
 	if c.Sideband == "lsb" {
 		b.sign = -1

@@ -9,10 +9,14 @@ import (
 // 2^-64, from -1/2 up to 1/2. Its resolution is 2^-62 turns.
 type pitch struct{ whole, part int64 }
 
-func pitchOf(f float64) pitch {
+// pitchOf returns hz at rate samples a second; what the quotient is rounded by
+// is added again, as it would come to 1e-5 turns in a month.
+func pitchOf(hz, rate float64) pitch {
+	f := hz / rate
 	w := math.Round(f)
-	p := min((f-w)*(1<<62), 1<<61-1)
-	return pitch{int64(w), int64(p) << 2}
+	rest := math.FMA(-f, rate, hz) / rate
+	p := int64((f-w)*(1<<62)) + int64(math.Round(rest*(1<<62)))
+	return pitch{int64(w), min(p, 1<<61-1) << 2}
 }
 
 // angle returns the phase p in radians.

@@ -38,10 +38,9 @@ func newLocal(c *Config, dt float64) *local {
 	return l
 }
 
-// step returns the mean frequency of the dt seconds from t on, without turns of
-// the virtual trimmer by hand.
+// step returns the mean frequency of the next dt seconds, t their middle, without
+// turns of the virtual trimmer by hand.
 func (l *local) step(t float64) float64 {
-	t += l.dt / 2
 	f := l.f0 + l.drift*t
 	if l.white != 0 {
 		f += l.white * l.r.NormFloat64()

@@ -18,21 +18,21 @@ type step struct {
 // make makes the next step of sound.
 func (b *Bench) make() {
 	c := &b.cfg
-	t, dt := b.gridTime(b.k), b.gridTime(1)
 	end := int64(math.Ceil(b.gridSample(b.k+1) - 1e-6))
+	t, dt := float64(b.n+end)/2*b.dts, float64(end-b.n)*b.dts // the step's middle and length
 	s := step{n: end - b.n, before: b.g[1][0] + b.g[1][1], after: b.g[2][0] + b.g[2][1], start: b.gridSample(b.k) - float64(b.n)}
 	s.halfway = b.gridSample(b.k-b.k%int64(b.parts)) + c.Rate/2 - float64(b.n)
 
 	beat := c.Local - c.Carrier + b.loc.step(t) + b.Trimmed()
-	common := c.ReceiverDrift * (t + dt/2) / 60
+	common := c.ReceiverDrift * t / 60
 	for _, r := range c.Retunes {
-		if t+dt/2 >= r.At {
+		if t >= r.At {
 			common += r.By
-			s.retuned = s.retuned || t-dt/2 < r.At
+			s.retuned = s.retuned || t-dt < r.At
 		}
 	}
-	s.carrier, s.beat = pitchOf((c.Tone+common)*b.dts), pitchOf(beat*b.dts)
-	s.hearC, s.hearL = !inside(c.CarrierAway, t+dt/2), !inside(c.LocalAway, t+dt/2)
+	s.carrier, s.beat = pitchOf(c.Tone+common, b.rate), pitchOf(beat, b.rate)
+	s.hearC, s.hearL = !inside(c.CarrierAway, t), !inside(c.LocalAway, t)
 	if b.product() {
 		s.hearL = s.hearL && math.Abs(beat*b.dts) < 0.5
 	} else {

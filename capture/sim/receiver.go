@@ -47,7 +47,7 @@ func newReceiver(c *Config) *receiver {
 		r.sigma /= max(h, 1e-3)
 	}
 	for _, s := range c.Spurs {
-		r.spurs = append(r.spurs, spur{amp: amplitude(s.DBFS), pitch: pitchOf(s.Hz / rate)})
+		r.spurs = append(r.spurs, spur{amp: amplitude(s.DBFS), pitch: pitchOf(s.Hz, rate)})
 	}
 	r.attack = 1 - math.Exp(-1/(rate*c.AGCAttack))
 	r.decay = 1 - math.Exp(-1/(rate*c.AGCDecay))
@@ -156,16 +156,16 @@ func newOneSide(c *Config, dt float64) *oneSide {
 	if c.White || c.Hookup != "two-tone" {
 		return nil
 	}
-	middle := ((c.Passband[0]+c.Passband[1])/2 - c.Tone) * dt
+	middle := (c.Passband[0]+c.Passband[1])/2 - c.Tone
 	if c.Sideband == "lsb" {
 		middle = -middle
 	}
-	f := &oneSide{pitch: pitchOf(middle)}
+	f := &oneSide{pitch: pitchOf(middle, 1/dt)}
 	h := complex(1, 0)
 	for i := range f.part[0] {
 		q := newBiquad((c.Passband[1]-c.Passband[0])/2*dt, 1/(2*math.Cos(math.Pi*(2*float64(i)+1)/20)), false)
 		f.part[0][i], f.part[1][i] = q, q
-		h *= q.response(-middle)
+		h *= q.response(-middle * dt)
 	}
 	if cmplx.Abs(h) < 0.5 {
 		return nil

@@ -7,6 +7,7 @@ import (
 	"io"
 	"math"
 	"math/cmplx"
+	"slices"
 	"strings"
 	"testing"
 	"time"
@@ -24,6 +25,7 @@ func all(t testing.TB, cfg Config) (*Bench, [][]float32, []Truth) {
 	var blk capture.Block
 	var ch [][]float32
 	var truth []Truth
+	b.told = func(tr Truth) { truth = append(truth, tr) }
 	for {
 		err := b.Read(&blk)
 		if err == io.EOF {
@@ -37,9 +39,6 @@ func all(t testing.TB, cfg Config) (*Bench, [][]float32, []Truth) {
 				ch = append(ch, nil)
 			}
 			ch[i] = append(ch[i], blk.Ch[i]...)
-		}
-		if tr := b.Truth(); tr.T > 0 && (len(truth) == 0 || tr.T > truth[len(truth)-1].T) {
-			truth = append(truth, tr)
 		}
 	}
 	return b, ch, truth
@@ -174,8 +173,11 @@ func TestFadingStatistics(t *testing.T) {
 		t.Errorf("rms width %.4f Hz, want %g", w, sigma)
 	}
 	for _, r := range []float64{0.316, 1} {
-		crossings := 0
+		crossings, under := 0, 0
 		for i := 1; i < n; i++ {
+			if cmplx.Abs(g[i]) < r*math.Sqrt(power) {
+				under++
+			}
 			if cmplx.Abs(g[i-1]) < r*math.Sqrt(power) && cmplx.Abs(g[i]) >= r*math.Sqrt(power) {
 				crossings++
 			}
@@ -183,6 +185,10 @@ func TestFadingStatistics(t *testing.T) {
 		got, want := float64(crossings)/(n/rate), 2*math.Sqrt(math.Pi)*sigma*r*math.Exp(-r*r)
 		if math.Abs(got/want-1) > 0.06 {
 			t.Errorf("crossings of %g: %.4f a second, published %.4f", r, got, want)
+		}
+		fade := float64(under) / rate / float64(crossings)
+		if want := (math.Exp(r*r) - 1) / (2 * math.Sqrt(math.Pi) * sigma * r); math.Abs(fade/want-1) > 0.06 {
+			t.Errorf("mean fade below %g: %.4f s, published %.4f", r, fade, want)
 		}
 	}
 }
@@ -256,13 +262,11 @@ func TestLocalNoise(t *testing.T) {
 		{"flicker", Config{LocalFlickerFM: 1e-10}, map[int]float64{4: 1e-10, 16: 1e-10, 64: 1e-10}, 0.2},
 		{"walk", Config{LocalWalkFM: 1e-10}, map[int]float64{1: 1e-10, 16: 4e-10}, 0.2},
 	} {
-		c.cfg.Local, c.cfg.Seed = 10e6, 5
-		l := newLocal(&c.cfg, 0.05)
-		y := make([]float64, 20000)
+		c.cfg.Seed, c.cfg.Rate, c.cfg.Hookup, c.cfg.Duration = 5, 10, "mixer", 20000
+		_, _, truth := all(t, c.cfg)
+		y := make([]float64, len(truth))
 		for i := range y {
-			for range 20 {
-				y[i] += l.step(0) / 10e6 / 20
-			}
+			y[i] = truth[i].Beat / 10e6
 		}
 		for tau, want := range c.at {
 			if got := adev(y, tau); math.Abs(got/want-1) > c.tol {
@@ -301,6 +305,23 @@ func TestDeterminismAndTrim(t *testing.T) {
 	cfg := Default()
 	cfg.Rate, cfg.Duration = 8000, 6
 	_, a, ta := all(t, cfg)
+	for _, most := range []int64{1, 37, 8000} {
+		small, err := New(cfg)
+		if err != nil {
+			t.Fatal(err)
+		}
+		small.most = most
+		var blk capture.Block
+		n := 0
+		for ; small.Read(&blk) == nil; n += blk.Len() {
+			if int64(blk.Len()) > most || !slices.Equal(blk.Ch[0], a[0][n:n+blk.Len()]) {
+				t.Fatalf("blocks of %d give other sound", most)
+			}
+		}
+		if n != len(a[0]) {
+			t.Fatalf("%d samples in blocks of %d", n, most)
+		}
+	}
 	_, b, _ := all(t, cfg)
 	for i := range a[0] {
 		if a[0][i] != b[0][i] {
@@ -357,13 +378,15 @@ func TestDropouts(t *testing.T) {
 		t.Fatal(err)
 	}
 	var blk capture.Block
-	next, gaps := int64(0), 0
+	next, gaps, lost, told := int64(0), 0, int64(0), int64(0)
+	b.told = func(tr Truth) { told += tr.Lost }
 	for b.Read(&blk) == nil {
 		if blk.First != next+blk.Lost {
 			t.Fatalf("first %d after %d, lost %d", blk.First, next, blk.Lost)
 		}
 		if blk.Lost > 0 {
 			gaps++
+			lost += blk.Lost
 			if blk.Lost != 2400 && blk.First+int64(blk.Len()) != 480000 || blk.Cause != capture.Simulated {
 				t.Errorf("%+v", blk.Lost)
 			}
@@ -372,6 +395,9 @@ func TestDropouts(t *testing.T) {
 	}
 	if gaps < 4 || gaps > 25 {
 		t.Errorf("%d drop-outs in a minute", gaps)
+	}
+	if told != lost || next != 480000 {
+		t.Errorf("lost %d samples, truth says %d; ended at %d", lost, told, next)
 	}
 }
 
@@ -450,7 +476,9 @@ func TestWrite(t *testing.T) {
 }
 
 func TestRefusals(t *testing.T) {
-	for _, c := range []Config{{Rate: 5}, {Hookup: "am"}, {Sideband: "x"}, {Channel: "bad"}, {Tone: 30000}, {Depth: 2}, {SpreadHz: 50, Channel: "custom"}, {Offset: math.NaN()}} {
+	for _, c := range []Config{{Rate: 5}, {Hookup: "am"}, {Sideband: "x"}, {Channel: "bad"}, {Tone: 30000}, {Depth: 2}, {SpreadHz: 50, Channel: "custom"}, {Offset: math.NaN()},
+		{LocalWhiteFM: math.Inf(1)}, {Channel: "custom"}, {Channel: "quiet", SpreadHz: 1}, {Baseband: true}, {Retunes: []Step{{At: math.NaN()}}},
+		{CarrierAway: [][2]float64{{3, 2}}}, {Spurs: []Spur{{Hz: 25000}}}, {Passband: [2]float64{2000, 1000}}} {
 		if _, err := New(c); err == nil || strings.Contains(err.Error(), "\n") {
 			t.Errorf("%+v: %v", c, err)
 		}
