@@ -204,6 +204,7 @@ func TestOppositeSideband(t *testing.T) {
 				m[i] = complex(1+0.5*math.Cos(2*math.Pi*f*float64(i)/rate), 0)
 			}
 			newOneSide(&c, 1.0/rate).pass(m)
+			pair := complex(1, 0)
 			for _, side := range []float64{f, -f} {
 				var sum complex128
 				for i := rate; i < 2*rate; i++ {
@@ -213,7 +214,12 @@ func TestOppositeSideband(t *testing.T) {
 					}
 					sum += e * cmplx.Rect(1, -2*math.Pi*side*float64(i)/rate)
 				}
+				pair *= sum
 				audible[1000+side] = 20 * math.Log10(cmplx.Abs(sum)/rate/0.25)
+			}
+			// Amplitude modulation stays that: both sidebands turn about the carrier.
+			if turn := cmplx.Phase(pair); f <= 200 && math.Abs(turn) > 0.12 {
+				t.Errorf("%s: sidebands at +-%g Hz turned by %.3f", sb, f, turn)
 			}
 		}
 		for f, db := range audible {
@@ -351,6 +357,10 @@ func TestWriteReadBySox(t *testing.T) {
 			t.Fatal(err)
 		}
 		f.Close()
+		file, err := os.ReadFile(name)
+		if err != nil || len(file)%2 != 0 || int(binary.LittleEndian.Uint32(file[4:]))+8 != len(file) {
+			t.Errorf("%d bits: %d bytes, header says %d and 8 (%v)", c.bits, len(file), binary.LittleEndian.Uint32(file[4:]), err)
+		}
 		var complaint bytes.Buffer
 		cmd := exec.Command(sox, name, "-t", "raw", "-e", "floating-point", "-b", "32", "-L", "-")
 		cmd.Stderr = &complaint
