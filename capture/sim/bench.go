@@ -37,13 +37,14 @@ type Bench struct {
 	planar [2][]float32 // out, as long as the present step
 
 	loc    *local
+	wander *wander
 	ch     *channel
 	prog   *programme
-	pc, pb uint64           // phases of the carrier's tone and of the beat, as sent
-	g      [4][2]complex128 // gains of both paths at the grid's points around the step
-	m      []complex128     // modulated carrier, the delayed path's history first
-	late   int              // delay of the second path, samples
-	made   int              // samples of the step in m
+	pc, pb uint64       // phases of the carrier's tone and of the beat, as sent
+	g      [2][2]gain   // of both paths at both ends of the step
+	m      []complex128 // modulated carrier, the delayed path's history first
+	late   int          // delay of the second path, samples
+	made   int          // samples of the step in m
 	rec    *receiver
 	drop   *drops
 
@@ -79,11 +80,10 @@ func New(cfg Config) (*Bench, error) {
 	}
 	dt := b.gridTime(1)
 	b.loc, b.ch, b.prog, b.rec = newLocal(c, dt), newChannel(c), newProgramme(c, b.dts), newReceiver(c)
+	b.wander = newWander(c)
 	start := rand.New(rand.NewPCG(c.Seed, 1))
 	b.pc, b.pb = start.Uint64(), start.Uint64()
-	for i := range b.g {
-		b.g[i][0], b.g[i][1] = b.ch.at(float64(i-1) * dt)
-	}
+	b.g = [2][2]gain{b.ch.at(0), b.ch.at(dt)}
 	longest := int(math.Ceil(c.Rate/float64(b.parts))) + 1
 	b.late = int(math.Round(c.PathDelay * c.Rate))
 	b.m = make([]complex128, b.late+longest)
@@ -101,10 +101,10 @@ func New(cfg Config) (*Bench, error) {
 	return b, nil
 }
 
-// partsFor chooses the steps a second: 250, and for wide spreads as many as keep
-// the interpolation's error about 80 dB below the carrier.
+// partsFor chooses the steps a second: 250, and for wide or shifted spectra as
+// many as keep the interpolation's error 100 dB below the carrier.
 func partsFor(c *Config) int {
-	return max(1, int(min(max(250, 200*c.SpreadHz), math.Floor(c.Rate))))
+	return max(1, int(min(max(250, 150*c.SpreadHz+50*math.Abs(c.PathShift)), math.Floor(c.Rate))))
 }
 
 // gridTime returns the true time of grid point k, s.
@@ -126,13 +126,13 @@ func (b *Bench) Config() Config { return b.cfg }
 
 // Trim turns the virtual trimmer: it adds hz to the local's frequency at RF from
 // the next step on, its phase continuous. A value that is not finite turns
-// nothing.
+// nothing, and the trimmer has stops at +-1 MHz.
 func (b *Bench) Trim(hz float64) {
 	if math.IsNaN(hz) || math.IsInf(hz, 0) {
 		return
 	}
 	b.mu.Lock()
-	b.trimmed += hz
+	b.trimmed = max(-1e6, min(1e6, b.trimmed+hz))
 	b.mu.Unlock()
 }
 
@@ -144,7 +144,8 @@ func (b *Bench) Trimmed() float64 {
 }
 
 // Truth returns what was true in the last whole second that was made; T is 0
-// before the first. Sound is made up to one step before it is read.
+// before the first. It may be called at any time, from any goroutine; sound is
+// made up to one step before it is read.
 func (b *Bench) Truth() Truth {
 	b.mu.Lock()
 	defer b.mu.Unlock()

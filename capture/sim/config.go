@@ -16,8 +16,13 @@ import (
 	"fmt"
 	"math"
 	"slices"
+	"strconv"
 	"strings"
 )
+
+// Version grows whenever the same seed and configuration begin to give other
+// sound.
+const Version = 2
 
 // Config describes a scene. New fills in defaults for zero values where the
 // comment names one. Times are true seconds from the start; a tone outside of
@@ -39,6 +44,7 @@ type Config struct {
 	LocalFlickerFM float64 `json:"local_flicker_fm"` // the floor of flicker FM, 1 s to 10000 s
 	LocalWalkFM    float64 `json:"local_walk_fm"`    // at 1 s, random walk FM
 	ReceiverDrift  float64 `json:"receiver_drift_hz_per_min"`
+	ReceiverWander float64 `json:"receiver_wander_hz"` // rms of its slow coming and going over hours, bounded where drift is not
 
 	CarrierDBFS float64    `json:"carrier_dbfs"`     // default -20
 	LocalDBFS   float64    `json:"local_dbfs"`       // default -18
@@ -46,7 +52,7 @@ type Config struct {
 	Passband    [2]float64 `json:"passband_hz"`      // of the receiver, for noise and programme; default 300 to 2700
 	White       bool       `json:"white"`            // no such filter; so always for mixer and quadrature
 
-	Channel   string  `json:"channel"`       // steady (default), quiet, moderate, disturbed, custom
+	Channel   string  `json:"channel"`       // steady (default), quiet, moderate, disturbed, custom; rice:K is custom with RiceK, and quiet's paths unless it says
 	SpreadHz  float64 `json:"spread_hz"`     // custom: rms Doppler width of each path, half the "Doppler spread" of F.1487; up to 15
 	PathDelay float64 `json:"path_delay_s"`  // custom: of the second path, to the nearest sample
 	PathShift float64 `json:"path_shift_hz"` // custom: mean Doppler of the second path
@@ -112,7 +118,7 @@ var presets = map[string][2]float64{
 	"disturbed": {2e-3, 1},
 }
 
-// Channels lists the names of channels.
+// Channels lists the names of channels; rice:K is one more, for any number K.
 var Channels = []string{"steady", "quiet", "moderate", "disturbed", "custom"}
 
 func (c *Config) complete() error {
@@ -145,6 +151,16 @@ func (c *Config) complete() error {
 		c.Channel = "steady"
 		if c.SpreadHz != 0 || c.PathDelay != 0 || c.PathShift != 0 {
 			c.Channel = "custom"
+		}
+	}
+	if k, ok := strings.CutPrefix(c.Channel, "rice:"); ok {
+		v, err := strconv.ParseFloat(k, 64)
+		if err != nil || c.RiceK != 0 && c.RiceK != v {
+			return fmt.Errorf("simulated bench: channel %q: must be rice: and one number, such as rice:4, and no other Rice factor beside it", c.Channel)
+		}
+		c.Channel, c.RiceK = "custom", v
+		if c.SpreadHz == 0 && c.PathDelay == 0 && c.PathShift == 0 {
+			c.PathDelay, c.SpreadHz = presets["quiet"][0], presets["quiet"][1]/2
 		}
 	}
 	if p, ok := presets[c.Channel]; ok {
@@ -199,7 +215,7 @@ func (c *Config) checkRanges() error {
 	}
 	all := []number{
 		{"rate", c.Rate, 10, 384000}, {"carrier", c.Carrier, 1, 1e12}, {"local", c.Local, 1, 1e12}, {"tone", c.Tone, -1e6, 1e6},
-		{"offset", c.Offset, -1e5, 1e5}, {"drift", c.Drift, -1, 1}, {"receiver drift", c.ReceiverDrift, -1e3, 1e3},
+		{"offset", c.Offset, -1e5, 1e5}, {"drift", c.Drift, -1, 1}, {"receiver drift", c.ReceiverDrift, -1e3, 1e3}, {"receiver wander", c.ReceiverWander, 0, 1e3},
 		{"white FM", c.LocalWhiteFM, 0, 1e-3}, {"flicker FM", c.LocalFlickerFM, 0, 1e-3}, {"walk FM", c.LocalWalkFM, 0, 1e-3},
 		{"carrier level", c.CarrierDBFS, -140, 0}, {"local level", c.LocalDBFS, -140, 0}, {"C/N0", c.CarrierCN0, -20, 160},
 		{"passband", c.Passband[0], 0, 1e6}, {"passband", c.Passband[1], 0, 1e6},

@@ -25,6 +25,29 @@ type spur struct {
 	pitch pitch
 }
 
+// wander is the slow coming and going of the receiver's dial: a Gaussian process
+// with a spectrum 1/7200 Hz wide, taken from its value at the start.
+type wander struct {
+	p     *path
+	scale float64
+	start float64
+}
+
+func newWander(c *Config) *wander {
+	w := &wander{p: newPath(1.0/7200, c.Seed, 601), scale: c.ReceiverWander}
+	w.start = real(w.p.at(0).v)
+	return w
+}
+
+// at returns Hz; t never goes back. The difference of two values has twice the
+// power of one, of which the process's real part has half: its rms is scale.
+func (w *wander) at(t float64) float64 {
+	if w.scale == 0 {
+		return 0
+	}
+	return w.scale * (real(w.p.at(t).v) - w.start)
+}
+
 // newReceiver scales the noise so that C/N0 is as asked at the carrier's pitch,
 // whatever the filter does there: C/N0 = (A^2/2) / N0 with N0 = 2 sigma^2 / rate
 // for real samples; A^2 and the same density a component for I and Q.

@@ -4,7 +4,11 @@ import (
 	"io"
 	"math"
 	"math/cmplx"
+	"slices"
 	"testing"
+
+	"gonum.org/v1/gonum/dsp/fourier"
+	"gonum.org/v1/gonum/dsp/window"
 
 	"offbeat/capture"
 )
@@ -149,21 +153,35 @@ func TestFadingStatistics(t *testing.T) {
 	g := make([]complex128, n)
 	power := 0.0
 	for i := range g {
-		g[i] = p.at(float64(i) / rate)
+		g[i] = p.at(float64(i) / rate).v
 		power += real(g[i])*real(g[i]) + imag(g[i])*imag(g[i])
 	}
 	power /= n
 	if math.Abs(power-1) > 0.05 {
 		t.Errorf("mean power %.3f", power)
 	}
-	// Width from the lag-one correlation: exp(-(2 pi sigma t)^2 / 2).
-	var c complex128
-	for i := 1; i < n; i++ {
-		c += g[i] * cmplx.Conj(g[i-1])
+	// Width and shape by the periodogram, Hann weighted so that nothing leaks.
+	spectrum := make([]float64, 4000)
+	fft := fourier.NewCmplxFFT(len(spectrum))
+	for at := 0; at < n; at += len(spectrum) {
+		for i, z := range fft.Coefficients(nil, window.HannComplex(slices.Clone(g[at:at+len(spectrum)]))) {
+			spectrum[i] += real(z)*real(z) + imag(z)*imag(z)
+		}
 	}
-	rho := cmplx.Abs(c) / float64(n-1) / power
-	if w := math.Sqrt(-2*math.Log(rho)) * rate / (2 * math.Pi); math.Abs(w/sigma-1) > 0.03 {
-		t.Errorf("rms width %.4f Hz, want %g", w, sigma)
+	var sum, first, second, beyond float64
+	for i, p := range spectrum {
+		f := rate * fft.Freq(i)
+		sum, first, second = sum+p, first+p*f, second+p*f*f
+		if math.Abs(f) > 2*sigma {
+			beyond += p
+		}
+	}
+	mean := first / sum
+	if w := math.Sqrt(second/sum - mean*mean); math.Abs(w/sigma-1) > 0.03 || math.Abs(mean) > 0.02 {
+		t.Errorf("rms width %.4f Hz about %.4f, want %g about 0", w, mean, sigma)
+	}
+	if tail := beyond / sum; math.Abs(tail/math.Erfc(math.Sqrt2)-1) > 0.1 {
+		t.Errorf("%.4f of the power beyond two widths, want %.4f of a Gaussian", tail, math.Erfc(math.Sqrt2))
 	}
 	for _, r := range []float64{0.316, 1} {
 		crossings, under := 0, 0
@@ -197,12 +215,16 @@ func TestPresets(t *testing.T) {
 			t.Errorf("%s: %v", name, b.cfg)
 		}
 	}
+	if b, err := New(Config{Channel: "rice:7.5", Seed: 1}); err != nil || b.cfg.RiceK != 7.5 || b.cfg.SpreadHz != 0.05 || b.cfg.PathDelay != 0.5e-3 {
+		t.Errorf("rice:7.5 is %+v, %v", b, err)
+	}
 	b, _ := New(Config{Channel: "quiet", RiceK: 3, Seed: 2})
 	var mean complex128
 	power := 0.0
 	const n = 40000
 	for i := range n {
-		g1, g2 := b.ch.at(100 + float64(i))
+		h := b.ch.at(100 + float64(i))
+		g1, g2 := h[0].v, h[1].v
 		mean += (g1 + g2) / n
 		power += (real(g1+g2)*real(g1+g2) + imag(g1+g2)*imag(g1+g2)) / n
 	}
@@ -275,19 +297,26 @@ func TestProgramme(t *testing.T) {
 	for _, sb := range []string{"usb", "lsb"} {
 		_, ch, _ := all(t, Config{Rate: 8000, Duration: 4, CarrierCN0: 160, White: true, Seed: 1, LocalDBFS: -139, Tones: true, Sideband: sb, Tone: 1500})
 		up, down := cmplx.Abs(line(ch[0], 8000, 2000)), cmplx.Abs(line(ch[0], 8000, 1000))
-		if math.Abs(up/down-1) > 1e-5 || math.Abs(up/0.1-0.25) > 0.002 {
+		if math.Abs(up/down-1) > 1e-6 || math.Abs(up/0.1-0.25) > 0.002 {
 			t.Errorf("%s: sidebands %.6f and %.6f", sb, up, down)
 		}
 	}
-	_, ch, _ := all(t, Config{Rate: 8000, Duration: 5, CarrierCN0: 160, White: true, Seed: 1, LocalDBFS: -139, SecondPulses: true, Tone: 1237})
-	for s := 1; s < 5; s++ {
-		in, out := 0.0, 0.0
-		for i := range 40 {
-			in = max(in, math.Abs(float64(ch[0][s*8000+i])))
-			out = max(out, math.Abs(float64(ch[0][s*8000+1000+i])))
-		}
-		if in < 1.4*out {
-			t.Errorf("second %d: peak %.3f in the pulse, %.3f outside", s, in, out)
+	// Pulses come by true seconds, 5 cycles of 1000 Hz: the envelope, from I and Q,
+	// is 1 + 0.9 sin, and 1 before and after.
+	for _, e := range []float64{0, 0.01} {
+		_, ch, _ := all(t, Config{Rate: 8000, Duration: 5, CarrierCN0: 160, Hookup: "quadrature", Seed: 1, SecondPulses: true, ClockError: e})
+		for s := 1; s < 5; s++ {
+			for i := -100; i < 200; i++ {
+				n := int(math.Ceil(float64(s)*8000*(1+e))) + i
+				in := float64(n)/(8000*(1+e)) - float64(s)
+				want := 0.1
+				if in >= 0 && in < 0.005 {
+					want += 0.09 * math.Sin(2*math.Pi*1000*in)
+				}
+				if got := math.Hypot(float64(ch[0][n]), float64(ch[1][n])); math.Abs(got-want) > 1e-6 {
+					t.Fatalf("clock error %g, %.6f s after second %d: envelope %.6f, want %.6f", e, in, s, got, want)
+				}
+			}
 		}
 	}
 }

@@ -9,6 +9,7 @@ import (
 	"math/cmplx"
 	"slices"
 	"strings"
+	"sync"
 	"testing"
 	"time"
 
@@ -65,6 +66,48 @@ func TestDeterminismAndTrim(t *testing.T) {
 	}
 	if f := freq(x[3*8000:8*8000], 8000, 1005); math.Abs(f-1005) > 1e-3 || bn.Trimmed() != 5 {
 		t.Errorf("local at %.4f Hz after a turn of 5 Hz", f)
+	}
+}
+
+// Whoever likes turns the trimmer and asks for the truth while it is read; this
+// says most under the race detector.
+func TestTrimFromElsewhere(t *testing.T) {
+	b, err := New(Config{Rate: 8000, Seed: 1, Duration: 30})
+	if err != nil {
+		t.Fatal(err)
+	}
+	var hands sync.WaitGroup
+	for range 4 {
+		hands.Go(func() {
+			for range 100 {
+				b.Trim(0.25)
+				if tr := b.Truth(); tr.Trimmed > 100 || b.Trimmed() > 100 {
+					t.Errorf("truth %+v, trimmed %g", tr, b.Trimmed())
+				}
+			}
+		})
+	}
+	var blk capture.Block
+	for b.given < 10*8000 {
+		if err := b.Read(&blk); err != nil {
+			t.Fatal(err)
+		}
+	}
+	hands.Wait()
+	for b.Read(&blk) == nil {
+	}
+	if tr := b.Truth(); tr.T != 29.5 || tr.Trimmed != 100 || math.Abs(tr.Beat-100) > 1e-9 {
+		t.Errorf("after 400 turns of a quarter hertz: %+v", tr)
+	}
+	b.Trim(math.NaN())
+	if b.Trim(math.Inf(1)); b.Trimmed() != 100 {
+		t.Errorf("trimmed %g", b.Trimmed())
+	}
+	for range 3 {
+		b.Trim(-math.MaxFloat64)
+	}
+	if b.Trimmed() != -1e6 {
+		t.Errorf("trimmed %g beyond its stop", b.Trimmed())
 	}
 }
 
@@ -156,8 +199,17 @@ func TestWrite(t *testing.T) {
 			t.Errorf("%d bits: %d bytes", bits, wav.Len())
 		}
 		lines := strings.Split(strings.TrimSpace(truth.String()), "\n")
-		if len(lines) != 4 || !strings.HasPrefix(lines[0], `{"scene":{`) {
-			t.Fatalf("%d lines of truth: %s", len(lines), lines[0])
+		var head struct {
+			Scene   Config
+			Version int
+		}
+		if err := json.Unmarshal([]byte(lines[0]), &head); err != nil || len(lines) != 4 || head.Version != Version {
+			t.Fatalf("%d lines of truth: %s (%v)", len(lines), lines[0], err)
+		}
+		// What the truth file says of the scene makes the same sound again.
+		_, want, _ := all(t, cfg)
+		if _, again, _ := all(t, head.Scene); !slices.Equal(again[0], want[0]) {
+			t.Error("the scene in the truth file gives other sound")
 		}
 		var tr Truth
 		if err := json.Unmarshal([]byte(lines[2]), &tr); err != nil || tr.T != 1.5 || math.Abs(tr.Beat-3.2) > 0.01 {
@@ -171,7 +223,7 @@ func TestWrite(t *testing.T) {
 
 func TestRefusals(t *testing.T) {
 	for _, c := range []Config{{Rate: 5}, {Hookup: "am"}, {Sideband: "x"}, {Channel: "bad"}, {Tone: 30000}, {Depth: 2}, {SpreadHz: 50, Channel: "custom"}, {Offset: math.NaN()},
-		{LocalWhiteFM: math.Inf(1)}, {Channel: "custom"}, {Channel: "quiet", SpreadHz: 1}, {Baseband: true}, {Retunes: []Step{{At: math.NaN()}}},
+		{LocalWhiteFM: math.Inf(1)}, {Channel: "custom"}, {Channel: "rice:"}, {Channel: "rice:-1"}, {Channel: "rice:NaN"}, {Channel: "rice:3", RiceK: 2}, {ReceiverWander: -1}, {Channel: "quiet", SpreadHz: 1}, {Baseband: true}, {Retunes: []Step{{At: math.NaN()}}},
 		{CarrierAway: [][2]float64{{3, 2}}}, {Spurs: []Spur{{Hz: 25000}}}, {Passband: [2]float64{2000, 1000}}} {
 		if _, err := New(c); err == nil || strings.Contains(err.Error(), "\n") {
 			t.Errorf("%+v: %v", c, err)

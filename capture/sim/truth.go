@@ -1,9 +1,6 @@
 package sim
 
-import (
-	"math"
-	"math/cmplx"
-)
+import "math"
 
 // Truth is what was true of one second of sound, by the nominal sample clock.
 type Truth struct {
@@ -33,8 +30,8 @@ type ledger struct {
 	drop   *drops
 
 	beat, tone     count
-	cross          complex128
-	power          float64
+	turn, weight   float64 // integrals of power times angular frequency, and of power
+	power          float64 // as weight, while the carrier is heard
 	local, samples int64
 	t              Truth
 }
@@ -56,9 +53,11 @@ func (l *ledger) add(s *step, b *Bench) (Truth, bool) {
 	l.total.add(s.beat, s.n)
 	l.beat.add(s.beat, s.n)
 	l.tone.add(s.carrier, s.n)
-	l.cross += s.after * cmplx.Conj(s.before)
+	power := (s.before.power() + s.after.power()) / 2
+	l.turn += (s.before.turn() + s.after.turn()) / 2
+	l.weight += power
 	if s.hearC {
-		l.power += (real(s.before)*real(s.before) + imag(s.before)*imag(s.before) + real(s.after)*real(s.after) + imag(s.after)*imag(s.after)) / 2
+		l.power += power
 	}
 	if s.hearL {
 		l.local++
@@ -81,7 +80,7 @@ func (l *ledger) close(b *Bench) Truth {
 	t.T = float64(l.second) + 0.5
 	t.Beat = beat / b.dts
 	if b.ch.two {
-		t.Shift = cmplx.Phase(l.cross) / (2 * math.Pi * b.gridTime(1))
+		t.Shift = l.turn / l.weight / (2 * math.Pi)
 	}
 	t.Received = t.Beat - t.Shift
 	if !b.product() {

@@ -19,8 +19,8 @@ type WriteOptions struct {
 }
 
 // Write writes a scene as a WAV file, and its truth as JSON lines: first
-// {"scene": configuration}, seed and defaults filled in, then one Truth for each
-// whole second. The scene must have a duration and no drop-outs, for which a WAV
+// {"scene": configuration, "version": Version}, seed and defaults filled in, then
+// one Truth for each whole second. The scene must have a duration and no drop-outs, for which a WAV
 // file has no place; it is made as fast as possible. Samples beyond full scale
 // are clipped, integer ones rounded to even.
 func Write(ctx context.Context, wav, truth io.Writer, cfg Config, opt WriteOptions) error {
@@ -44,7 +44,7 @@ func Write(ctx context.Context, wav, truth io.Writer, cfg Config, opt WriteOptio
 	w := bufio.NewWriterSize(wav, 1<<18)
 	w.Write(header(b, opt.Bits))
 	enc := json.NewEncoder(truth)
-	if err := enc.Encode(map[string]any{"scene": b.Config()}); err != nil {
+	if err := enc.Encode(map[string]any{"scene": b.Config(), "version": Version}); err != nil {
 		return err
 	}
 	var told error
