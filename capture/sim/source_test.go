@@ -243,7 +243,7 @@ func TestReadAllocatesNothing(t *testing.T) {
 }
 
 func BenchmarkRead(b *testing.B) {
-	for name, cfg := range map[string]Config{"steady 48k": {}, "steady 8k": {Rate: 8000}, "demo 48k": Default()} {
+	for name, cfg := range map[string]Config{"steady 48k": {}, "steady 8k": {Rate: 8000}, "moderate 48k": {Channel: "moderate"}, "moderate 8k": {Channel: "moderate", Rate: 8000}, "demo 48k": Default()} {
 		b.Run(name, func(b *testing.B) {
 			s, err := New(cfg)
 			if err != nil {
