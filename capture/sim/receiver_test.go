@@ -156,7 +156,7 @@ func TestNoiseAtEveryRate(t *testing.T) {
 			n++
 		}
 		want := 0.1 * 0.1 / 2 / 1e5 * c.Rate * (1 + c.ClockError) / 2
-		if db := 10 * math.Log10(power / n / want); math.Abs(db) > 0.06 || math.Abs(next/power) > 0.01 {
+		if db := 10 * math.Log10(power/n/want); math.Abs(db) > 0.06 || math.Abs(next/power) > 0.01 {
 			t.Errorf("rate %g: power off by %.3f dB, neighbours alike by %.4f", c.Rate, db, next/power)
 		}
 	}
