@@ -34,27 +34,35 @@ type twoTone struct {
 	lens *lens
 	gl   *lens
 
-	bands  []*band
-	tr     [2]track
-	asked  bool // the hint has had its say
-	local  int  // index of the local's track, -1: not known
-	merged bool
-	missed int // seconds in a row without any tone while merged
-	jumped bool
-	alone  int // seconds since only one tone has been held
-	memory pairMemory
-	cand   float64 // a possible second tone, Hz, and how often it was seen in a row
-	candN  int
-	count  phaseCount
-	last   int64 // the last second looked at
-	avoid  []float64
+	bands   []*band
+	tr      [2]track
+	asked   bool // the hint has had its say
+	local   int  // index of the local's track, -1: not known
+	merged  bool
+	missed  int // seconds in a row without any tone while merged
+	jumped  bool
+	alone   int // seconds since only one tone has been held
+	memory  pairMemory
+	cand    float64 // a possible second tone, Hz, and how often it was seen in a row
+	candN   int
+	count   phaseCount
+	last    int64 // the last second looked at
+	avoid   []float64
+	slow    *slow
+	sm      *smear
+	pair    *pair
+	anchor  anchor
+	sure    bool    // which of two close tones is which
+	closest *fitted // what the joint fit of close tones says in this second, nil: nothing
+	dim     int     // seconds in a row without the carrier's power beside the local
 }
 
 func newTwoTone(cfg *Config, p *plan, r *raw) *twoTone {
 	iq := cfg.Hookup == Quadrature
+	s := newSlow(p)
 	return &twoTone{cfg: cfg, plan: p, raw: r, local: -1, last: -1,
 		acq:  newAcquirer(cfg.Rate, cfg.SearchLow, cfg.SearchHigh, iq),
-		lens: newLens(p, iq), gl: newLens(p, iq)}
+		lens: newLens(p, iq), gl: newLens(p, iq), slow: s, sm: newSmear(s), pair: newPair(s)}
 }
 
 func (e *twoTone) push(x, q []float32) {
@@ -85,7 +93,12 @@ func (e *twoTone) second(i int64) Reading {
 	mid := float64(i) + 0.5
 	e.jumped = false
 	e.last = i
-	if e.held() > 0 {
+	e.closest = nil
+	spread := e.isSpread() && e.followSpread(mid)
+	if !spread && e.closeBy(mid) && e.followClose(mid) && e.sure {
+		return e.reading(mid)
+	}
+	if e.held() > 0 && !spread {
 		e.follow(mid)
 	}
 	if e.held() == 0 {
@@ -98,6 +111,9 @@ func (e *twoTone) second(i int64) Reading {
 		e.alone = 0
 	}
 	e.identify(mid)
+	if !spread {
+		e.fade(mid)
+	}
 	return e.reading(mid)
 }
 
@@ -335,22 +351,13 @@ func (e *twoTone) sight(b *band, mid float64, k, ln int) {
 func (e *twoTone) unmerge(mid float64, k int) {
 	e.merged = false
 	e.jumped = true
-	m := &e.memory
-	if !m.known {
-		e.local = -1
-		return
-	}
-	f := [2]float64{e.tr[0].f, e.tr[1].f}
-	sep := math.Abs(f[0] - f[1])
-	d := [2]float64{math.Abs(f[0] - m.carrier), math.Abs(f[1] - m.carrier)}
+	a, b := &e.tr[0], &e.tr[1]
 	e.local = -1
-	level := func(c int) float64 { // how well the levels fit if c is the carrier, dB
-		return math.Abs(20*math.Log10(e.tr[c].amp/m.ampC)) + math.Abs(20*math.Log10(e.tr[1-c].amp/m.ampL))
-	}
-	for c := range 2 {
-		if d[c] < sep/4 && d[1-c] > sep/2 && level(c) < level(1-c)+3 && mid-m.at < 120 {
-			e.local = 1 - c
-		}
+	switch lean := e.leaning([2]float64{a.f, b.f}, [2]float64{a.amp, b.amp}, mid, math.Hypot(a.uf, b.uf), 0); {
+	case lean > sureEnough:
+		e.local = 1
+	case lean < -sureEnough:
+		e.local = 0
 	}
 }
 

@@ -27,6 +27,7 @@ func (e *twoTone) identify(mid float64) {
 					x.t.ev = x.was
 				}
 			}
+			e.anchor.add(mid, c.f, c.uf)
 			e.memory = pairMemory{true, mid, c.f, l.f, c.amp, l.amp, c.ev, l.ev}
 		}
 		return
@@ -111,6 +112,8 @@ func (e *twoTone) reading(mid float64) Reading {
 	}
 	scale := 1 + e.cfg.SampleRateError
 	switch held := e.held(); {
+	case e.closest != nil:
+		e.sayClose(&r, mid, scale)
 	case held == 0:
 		r.Why = "no tone stands out of the noise"
 	case e.merged:
@@ -168,6 +171,12 @@ func (e *twoTone) sayBoth(r *Reading, mid, scale float64) {
 		} else if !e.cfg.Wired {
 			r.flag(Unproven)
 		}
+		if !math.IsNaN(e.sm.sigma) {
+			r.SpreadHz = e.sm.sigma
+			if e.sm.sigma >= spreadLeast {
+				r.flag(Spread)
+			}
+		}
 		if a.ev.faded && !e.cfg.Wired {
 			r.flag(Faded)
 		}
@@ -183,7 +192,14 @@ func (e *twoTone) sayBoth(r *Reading, mid, scale float64) {
 		return
 	}
 	s := e.cfg.sign()
-	r.Beat = s * (b.f - a.f) * scale
+	if sm := e.sm; sm.sigma >= spreadLeast && !math.IsNaN(sm.beat) {
+		// Of a carrier that fades within the second, the mean weighted by power.
+		r.BeatU, r.BeatAbs = sm.u*scale, math.Abs(sm.beat)*scale
+		u = r.BeatU
+		r.Beat = -s * sm.beat * scale
+	} else {
+		r.Beat = s * (b.f - a.f) * scale
+	}
 	r.Error = r.Beat - e.cfg.SetOff()
 	r.Offset = r.Error / e.cfg.Local
 	r.OffsetU = u / e.cfg.Local
