@@ -6,7 +6,7 @@ import (
 )
 
 const (
-	localSpan   = 32.0  // the longest stretch over which the local's line is fitted, s
+	longSpan    = 128.0 // the longest stretch over which the local's line is fitted, s
 	phasorRate  = 10    // phasors of the carrier kept a second
 	phasorSpan  = 120   // s
 	spreadLeast = 0.015 // Hz: a narrower carrier is a line
@@ -16,6 +16,7 @@ const (
 // Hz, chirp, amplitude by full scale.
 type model struct {
 	at, phase, f, c, amp float64
+	uf                   float64 // of f, Hz
 }
 
 // turnsAt returns the phase at time t.
@@ -24,15 +25,19 @@ func (m *model) turnsAt(t float64) float64 {
 	return m.phase + m.f*d + m.c*d*d/2
 }
 
+func (m *model) when(t float64) float64 { return m.f + m.c*(t-m.at) }
+
 // smear looks at a carrier that fades. The local's line, which does not, is
-// fitted over many seconds and taken away; what is left is seen in the local's
-// own frame, where the receiver's drift is gone, and its mean frequency is the
+// found by generalised least squares in the carrier's own smear, over as many
+// seconds as that takes, and taken away; what is left is seen in the local's
+// frame, where the receiver's drift is gone, and its mean frequency is the
 // centre of gravity of its power: the pulse-pair mean of Zrnic (J. Appl.
 // Meteorol. 1977) and Doviak & Zrnic, here as the first moment of the
 // periodogram, free of the noise's own bias.
 type smear struct {
-	slow *slow
-	win  window
+	slow  *slow
+	st    stretch
+	white whitener
 
 	span  float64 // stretch of the local's last fit, s; 0: none
 	loc   model
@@ -41,9 +46,11 @@ type smear struct {
 	mean   float64 // carrier - local in the audio, Hz, smoothed
 	beat   float64 // the same in the latest second alone, NaN: not known
 	u      float64 // its standard uncertainty as received, Hz
-	power  float64 // of the carrier in the latest second, full scale 1
+	power  float64 // of the carrier in the latest second, |z|^2
+	powerU float64
 	phase  float64 // carrier - local at the second's middle, turns
 	sigma  float64 // rms Doppler width, Hz; NaN: not known
+	steady float64 // share of the carrier's power in one line, 0 to 1
 	slowly float64 // power of the carrier over some twenty seconds
 
 	ring [phasorRate * phasorSpan]complex128 // of the carrier by the local, turned back by ref*t; 0: none
@@ -58,151 +65,145 @@ func newSmear(s *slow) *smear {
 
 // forget starts afresh, as when the pair is lost.
 func (s *smear) forget() {
-	s.span, s.beat, s.sigma, s.slowly = 0, math.NaN(), math.NaN(), 0
+	s.span, s.beat, s.sigma, s.slowly, s.steady = 0, math.NaN(), math.NaN(), 0, 0
 	s.ring = [len(s.ring)]complex128{}
 }
 
-// follow fits the local's line over the longest stretch up to end that it runs
-// through undisturbed. guess is where it is now. It returns false when none
-// of a second or more does.
-func (s *smear) follow(b *band, end float64, guess model) bool {
-	try := min(2*max(s.span, 1), localSpan)
-	if s.span == 0 {
-		s.loc = guess
-	}
-	for ; try >= 1; try /= 2 {
-		start := s.loc
-		if try == 1 && math.Abs(guess.f-s.loc.f) > 0.2 {
-			start = guess
-		}
-		if m, ok := s.fitLocal(b, end, try, start); ok {
-			s.loc, s.span = m, try
-			return true
-		}
-	}
-	s.span = 0
-	return false
+// seek says where to look for the local's line.
+type seek struct {
+	end       float64 // s
+	haze      haze    // mu in audio Hz at end
+	amp       float64 // the local's level, |z|, and the range it may lie in
+	lo, hi    float64
+	f, reach  float64 // expected at end, audio Hz, and how far from there to look
+	slope, us float64 // the receiver's drift
 }
 
-// fitLocal fits phase, frequency, chirp and amplitude of one line over the span
-// that ends at end, by Gauss-Newton steps on the phase and amplitude of the
-// sound against the model.
-func (s *smear) fitLocal(b *band, end, span float64, m model) (model, bool) {
-	end = min(end, s.slow.upto())
-	mid := end - span/2
-	if s.slow.open(&s.win, mid, span, 0) < 0.9 {
-		return m, false
-	}
-	w := &s.win
-	s.taper(span)
-	osc := func(t float64) float64 { return b.oscillator(t) + (s.slow.centre-b.centre)*t }
-	f := m.f + m.c*(mid-m.at) - s.slow.centre
-	c := m.c
-	var a complex128
-	if span <= 4 {
-		f = s.nearest(f, 1.5/span)
-	}
-	f0 := f
-	for range 5 {
-		var df, dc float64
-		a, df, dc = s.step(f, c)
-		f += df
-		c += dc
-		if math.Abs(f-f0) > 2/span || math.IsNaN(f) {
-			return m, false
-		}
-		if math.Abs(df)*span < 1e-5 && math.Abs(dc)*span*span < 1e-5 {
-			break
-		}
-	}
-	if a == 0 || !s.steady(a, f, c, span) {
-		return m, false
-	}
-	ph := cphase(a) + osc(mid)
-	s.lever = leverage(span)
-	return model{mid, ph, f + s.slow.centre, c, cmplx.Abs(a) / b.gain(f+s.slow.centre-b.centre)}, w.used > 0
+// hit is a line found over one span.
+type hit struct {
+	m           model
+	span        float64
+	score, next float64 // log-likelihood gain, and that of the best other place
 }
 
-// taper gives the window's old end a quarter of the span to fade in and the new
-// one up to a second: there the fit must still hold, and there the carrier's
-// smear must not leak into the line.
-func (s *smear) taper(span float64) {
-	w := &s.win
-	in, out := span/4, min(1, span/4)
-	w.used = 0
-	for i := range w.z {
-		t := w.t0 + float64(i)*w.dt
-		g := 1.0
-		if e := t + w.half; e < in {
-			g *= 0.5 - 0.5*math.Cos(math.Pi*e/in)
-		}
-		if e := w.half - t; e < out {
-			g *= 0.5 - 0.5*math.Cos(math.Pi*e/out)
-		}
-		if !w.ok[i] {
-			g = 0
-		}
-		w.w[i] = g
-		w.used += g * w.dt
-	}
+// at returns the frequency at time t and its uncertainty there.
+func (h *hit) at(t float64) (f, u float64) {
+	return h.m.when(t), h.m.uf * (1 + 2*math.Abs(t-h.m.at)/h.span)
 }
 
-// nearest returns the strongest frequency within reach of f in the window.
-func (s *smear) nearest(f, reach float64) float64 {
-	best, at := 0.0, f
-	for k := -6; k <= 6; k++ {
-		g := f + float64(k)/6*reach
-		if p := energyAt(s.win.z, &s.win, g); p > best {
-			best, at = p, g
+// find looks for the local's line over spans from 2 s up and takes the longest
+// whose answer the shorter ones do not contradict.
+func (s *smear) find(b *band, x *seek) bool {
+	var best hit
+	for span := 2.0; span <= longSpan; span *= 2 {
+		h, ok := s.try(b, span, 0, x)
+		if !ok {
+			h, ok = hit{}, false
+			if span <= 4 && best.span == 0 {
+				h, ok = s.turning(b, span, x)
+			}
 		}
+		if !ok {
+			if best.span > 0 && span > 4*best.span {
+				break
+			}
+			continue
+		}
+		if best.span > 0 {
+			f1, u1 := best.at(x.end)
+			f2, u2 := h.at(x.end)
+			if math.Abs(f1-f2) > 4*math.Hypot(u1, u2)+1e-3 {
+				continue
+			}
+		}
+		best = h
 	}
-	return at
+	if best.span == 0 {
+		s.span = 0
+		return false
+	}
+	s.loc, s.span = best.m, best.span
+	s.lever = leverage(best.span)
+	return true
 }
 
-// step returns the amplitude at f, c and the corrections of both.
-func (s *smear) step(f, c float64) (a complex128, df, dc float64) {
-	w := &s.win
-	var sw float64
-	e, q, qq := chirped(f, c, w.t0, w.dt)
-	s.dft = resize(s.dft, len(w.z))
-	for i, z := range w.z {
-		v := z * cmplx.Conj(e)
-		s.dft[i] = v
-		a += v * complex(w.w[i], 0)
-		sw += w.w[i]
-		e *= q
-		q *= qq
-	}
-	if sw == 0 || a == 0 {
-		return 0, math.NaN(), 0
-	}
-	a /= complex(sw, 0)
-	var m [5]float64
-	var r [3]float64
-	inv := 1 / a
-	for i, v := range s.dft {
-		u := (w.t0 + float64(i)*w.dt) / w.half
-		y := imag(v*inv) * w.w[i]
-		r[0] += y
-		r[1] += y * u
-		r[2] += y * u * u
-		g := w.w[i]
-		for k := range m {
-			m[k] += g
-			g *= u
+// turning looks for a line that bends, as a local under trim does.
+func (s *smear) turning(b *band, span float64, x *seek) (hit, bool) {
+	var best hit
+	found := false
+	for k := -8; k <= 8; k++ {
+		c := float64(k) * 0.25 / (span * span)
+		if k == 0 || math.Abs(c) > 0.6 {
+			continue
+		}
+		if h, ok := s.try(b, span, c, x); ok && h.score > best.score {
+			best, found = h, true
 		}
 	}
-	x := solve3([3][3]float64{{m[0], m[1], m[2]}, {m[1], m[2], m[3]}, {m[2], m[3], m[4]}}, r)
-	return a, x[1] / (2 * math.Pi * w.half), x[2] / (math.Pi * w.half * w.half)
+	return best, found
 }
 
-// chirped returns exp(j(2 pi f t + pi c t^2)) at t0 and the factors by which it
-// goes on by steps of dt.
-func chirped(f, c, t0, dt float64) (e, q, qq complex128) {
-	return cmplx.Rect(1, 2*math.Pi*f*t0+math.Pi*c*t0*t0),
-		cmplx.Rect(1, 2*math.Pi*f*dt+math.Pi*c*dt*(2*t0+dt)),
-		cmplx.Rect(1, 2*math.Pi*c*dt*dt)
+// try scores every frequency within reach over one span and refines the best.
+func (s *smear) try(b *band, span, turn float64, x *seek) (hit, bool) {
+	half := math.Abs(x.haze.mu-x.f) + x.reach + 3.5*x.haze.sigma + 0.5
+	rate := min(s.slow.rate, 2.2*half)
+	n := int(span * rate)
+	if n > 2048 {
+		return hit{}, false
+	}
+	centre := x.f
+	s.slow.fetch(&s.st, x.end, span, centre, n)
+	if s.st.valid < 0.95 || len(s.st.z) < 24 {
+		return hit{}, false
+	}
+	d := x.end - s.st.mid
+	h := x.haze
+	h.mu = x.haze.mu - x.slope*d - centre
+	order := int(min(maxOrder, max(8, 1.2/(max(h.sigma, 1e-3)*s.st.dt)), float64(len(s.st.z)/4)))
+	s.white.set(h, s.st.dt, order)
+	s.white.take(&s.st)
+	c := x.slope + turn
+	f0 := -c * d // expected in the middle, if it is at x.f in the end
+	step := 0.35 / span
+	reach := x.reach + 1.5/span
+	var out hit
+	at := 0.0
+	scores := s.dft[:0]
+	for f := f0 - reach; f <= f0+reach; f += step {
+		g, _ := s.white.score(f, c, x.lo, x.hi)
+		scores = append(scores, complex(f, g))
+		if g > out.score {
+			out.score, at = g, f
+		}
+	}
+	for _, v := range scores {
+		if math.Abs(real(v)-at) > 1.6/span {
+			out.next = max(out.next, imag(v))
+		}
+	}
+	s.dft = scores
+	cells := math.Log(max(2, 2*reach*span))
+	if out.score < 8+cells || out.score-out.next < 6 {
+		return out, false
+	}
+	uc := math.Hypot(x.us, 1e-6)
+	if turn != 0 {
+		uc = 0.3 / (span * span)
+	}
+	f, c2, uf, amp := s.white.refine(at, c, c, uc)
+	if amp == 0 || math.Abs(f-at) > 1/span {
+		return out, false
+	}
+	m := &out.m
+	m.at, m.f, m.c, m.uf = s.st.mid, f+centre, c2, uf
+	m.amp = cmplx.Abs(amp) / b.gain(f+centre-b.centre)
+	osc := b.oscillator(m.at) + (s.slow.centre-b.centre)*m.at
+	m.phase = cphase(amp) + osc + frac1((centre-s.slow.centre)*m.at)
+	out.span = span
+	return out, true
 }
+
+func frac1(v float64) float64 { return v - math.Floor(v) }
 
 // solve3 solves a symmetric positive system of three.
 func solve3(m [3][3]float64, r [3]float64) [3]float64 {
@@ -224,33 +225,12 @@ func solve3(m [3][3]float64, r [3]float64) [3]float64 {
 	return r
 }
 
-// steady reports whether the window's line runs through it undisturbed: eighths
-// of it agree in phase.
-func (s *smear) steady(a complex128, f, c, span float64) bool {
-	w := &s.win
-	var part [8]complex128
-	var weight [8]float64
-	for i, v := range s.dft { // of the last step: turned back by the line
-		k := min(7, i*8/len(s.dft))
-		part[k] += v * complex(w.w[i], 0)
-		weight[k] += w.w[i]
-	}
-	var sum complex128
-	var power float64
-	for k := range part {
-		if weight[k] == 0 {
-			continue
-		}
-		d := part[k] / a
-		sum += d
-		power += real(d*cmplx.Conj(d)) / weight[k]
-	}
-	var all float64
-	for _, v := range weight {
-		all += v
-	}
-	coherent := real(sum*cmplx.Conj(sum)) / all / power
-	return coherent > 0.75
+// chirped returns exp(j(2 pi f t + pi c t^2)) at t0 and the factors by which it
+// goes on by steps of dt.
+func chirped(f, c, t0, dt float64) (e, q, qq complex128) {
+	return cmplx.Rect(1, 2*math.Pi*f*t0+math.Pi*c*t0*t0),
+		cmplx.Rect(1, 2*math.Pi*f*dt+math.Pi*c*dt*(2*t0+dt)),
+		cmplx.Rect(1, 2*math.Pi*c*dt*dt)
 }
 
 // leverage returns the density-to-power factor of a line's fit (amplitude,

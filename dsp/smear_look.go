@@ -38,7 +38,7 @@ func (s *smear) look(l *lens, b *band, mid, want, n0 float64) {
 		s.note(nil, mid)
 		return
 	}
-	s.beat, s.u, s.power = m.mean, m.u, m.power
+	s.beat, s.u, s.power, s.powerU = m.mean, m.u, m.power, m.powerU
 	s.phase = cphase(s.at(w, m.mean)) // at the middle, of the second as a whole
 	s.note(w, mid)
 }
@@ -236,4 +236,45 @@ func (s *smear) width(noise float64) float64 {
 		}
 	}
 	return out
+}
+
+// inOneLine returns the share of the carrier's power in the latest minute that
+// stands in one line; noise as for width.
+func (s *smear) inOneLine(noise float64) float64 {
+	const n = 60 * phasorRate
+	var power, have float64
+	for k := range n {
+		v := s.back1(k)
+		if v != 0 {
+			power += real(v)*real(v) + imag(v)*imag(v)
+			have++
+		}
+	}
+	if have < n/3 {
+		return s.steady
+	}
+	most := 0.0
+	reach := 0.1
+	if s.sigma > 0.1 {
+		reach = s.sigma
+	}
+	for f := s.mean - s.ref - reach; f <= s.mean-s.ref+reach; f += 0.3 / 60 {
+		var y complex128
+		q, e := cmplx.Rect(1, 2*math.Pi*f/phasorRate), complex(1, 0)
+		for k := range n {
+			y += s.back1(k) * e
+			e *= q
+		}
+		most = max(most, real(y)*real(y)+imag(y)*imag(y))
+	}
+	return min(1, most/have/max(power-noise*have, 1e-300))
+}
+
+// back1 returns the k-th latest phasor.
+func (s *smear) back1(k int) complex128 {
+	i := s.n - 1 - int64(k)
+	if i < 0 {
+		return 0
+	}
+	return s.ring[i%int64(len(s.ring))]
 }

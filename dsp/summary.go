@@ -69,6 +69,9 @@ type Summer struct {
 	beat    []float64 // Hz; signed if signed, else its size
 	u       []float64
 	run     []int32
+	level   []float64 // of the carrier by the local, amplitude; 0 where there is no beat
+	w, wf   []float64 // power and power times beat, summed over the point's seconds
+	wide    int       // seconds in which the carrier was smeared by Doppler
 	signed  int
 	spread  float64
 	spreadN int
@@ -105,6 +108,7 @@ func (s *Summer) Add(r Reading) {
 		s.spread += r.SpreadHz
 		s.spreadN++
 	}
+	level := s.weigh(&r, beat)
 	if s.n%s.tau0 == 0 {
 		if len(s.phase) == summaryPoints {
 			s.halve()
@@ -114,17 +118,40 @@ func (s *Summer) Add(r Reading) {
 			s.beat = append(s.beat, beat)
 			s.u = append(s.u, r.BeatU)
 			s.run = append(s.run, int32(r.PhaseRun))
+			s.level = append(s.level, level)
+			s.w, s.wf = append(s.w, 0), append(s.wf, 0)
 		}
+	}
+	if k := len(s.w) - 1; level > 0 {
+		s.w[k] += level * level
+		s.wf[k] += level * level * beat
 	}
 	s.n++
 }
 
+// weigh returns the carrier's amplitude by the local's, which gain control
+// leaves alone; 0 without a beat. Where levels are not told, 1.
+func (s *Summer) weigh(r *Reading, beat float64) float64 {
+	if math.IsNaN(beat) || s.signed > 0 && math.IsNaN(r.Beat) {
+		return 0
+	}
+	if r.Has(Spread) {
+		s.wide++
+	}
+	if d := r.CarrierDBFS - r.LocalDBFS; !math.IsNaN(d) {
+		return math.Pow(10, d/20)
+	}
+	return 1
+}
+
 func (s *Summer) halve() {
 	for i := range summaryPoints / 2 {
-		s.phase[i], s.beat[i], s.u[i], s.run[i] = s.phase[2*i], s.beat[2*i], s.u[2*i], s.run[2*i]
+		s.phase[i], s.beat[i], s.u[i], s.run[i], s.level[i] = s.phase[2*i], s.beat[2*i], s.u[2*i], s.run[2*i], s.level[2*i]
+		s.w[i], s.wf[i] = s.w[2*i]+s.w[2*i+1], s.wf[2*i]+s.wf[2*i+1]
 	}
 	n := summaryPoints / 2
-	s.phase, s.beat, s.u, s.run = s.phase[:n], s.beat[:n], s.u[:n], s.run[:n]
+	s.phase, s.beat, s.u, s.run, s.level = s.phase[:n], s.beat[:n], s.u[:n], s.run[:n], s.level[:n]
+	s.w, s.wf = s.w[:n], s.wf[:n]
 	s.tau0 *= 2
 }
 
@@ -211,7 +238,7 @@ func (s *Summer) budget(mean, u float64) []BudgetLine {
 // says what it is worth: the largest of adev(m) * sqrt(m tau0 / T).
 func (s *Summer) mean() (mean, u float64, method string) {
 	slope, resid, sxx, points := s.regress()
-	if points < 3 {
+	if points < 3 && s.wide < s.usable/2 {
 		return s.weighted()
 	}
 	dt := float64(s.tau0)
@@ -221,9 +248,18 @@ func (s *Summer) mean() (mean, u float64, method string) {
 	// In short runs wandering cannot show in the residuals: there the phases must
 	// also be as quiet as the readings' own uncertainty says.
 	trusted := white < 4*s.phaseU() || points > 30*s.runs()
-	if n1 < 8 || resid < 1.6*white && trusted {
+	if points >= 3 && (n1 < 8 || resid < 1.6*white && trusted) && s.wide < s.usable/2 {
 		su := max(resid, s.phaseU(), white) / math.Sqrt(sxx)
 		return slope * scale, su * scale, "phase regression over unbroken runs"
+	}
+	if mean, u, ok := s.coherent(); ok {
+		return mean * scale, math.Hypot(u, s.phaseU()/math.Sqrt(max(sxx, 1))) * scale, "coherent over the run: the carrier's steady part"
+	}
+	if s.wide >= s.usable/2 {
+		if mean, u, ok := s.byPower(); ok {
+			return mean, u, "mean weighted by the carrier's power; uncertainty from its fading"
+		}
+		return s.weighted()
 	}
 	m, held := s.ends()
 	worst := 0.0

@@ -34,27 +34,31 @@ type twoTone struct {
 	lens *lens
 	gl   *lens
 
-	bands   []*band
-	tr      [2]track
-	asked   bool // the hint has had its say
-	local   int  // index of the local's track, -1: not known
-	merged  bool
-	missed  int // seconds in a row without any tone while merged
-	jumped  bool
-	alone   int // seconds since only one tone has been held
-	memory  pairMemory
-	cand    float64 // a possible second tone, Hz, and how often it was seen in a row
-	candN   int
-	count   phaseCount
-	last    int64 // the last second looked at
-	avoid   []float64
-	slow    *slow
-	sm      *smear
-	pair    *pair
-	anchor  anchor
-	sure    bool    // which of two close tones is which
-	closest *fitted // what the joint fit of close tones says in this second, nil: nothing
-	dim     int     // seconds in a row without the carrier's power beside the local
+	bands    []*band
+	tr       [2]track
+	asked    bool // the hint has had its say
+	local    int  // index of the local's track, -1: not known
+	merged   bool
+	missed   int // seconds in a row without any tone while merged
+	jumped   bool
+	alone    int // seconds since only one tone has been held
+	memory   pairMemory
+	cand     float64 // a possible second tone, Hz, and how often it was seen in a row
+	candN    int
+	count    phaseCount
+	last     int64 // the last second looked at
+	avoid    []float64
+	slow     *slow
+	sm       *smear
+	pair     *pair
+	anchor   anchor
+	sure     bool    // which of two close tones is which
+	closest  *fitted // what the joint fit of close tones says in this second, nil: nothing
+	spotted  int     // how often in a row a line was seen to stand still beside a smear, and where
+	spotAt   float64
+	why      string // what settled which tone is which
+	lostLine int    // seconds for which the local's line has not been found in the smear
+	dim      int    // seconds in a row without the carrier's power beside the local
 }
 
 func newTwoTone(cfg *Config, p *plan, r *raw) *twoTone {
@@ -111,7 +115,11 @@ func (e *twoTone) second(i int64) Reading {
 		e.alone = 0
 	}
 	e.identify(mid)
-	if !spread {
+	switch {
+	case e.local < 0:
+		e.keepSlow()
+		e.spot(mid)
+	case !spread:
 		e.fade(mid)
 	}
 	return e.reading(mid)

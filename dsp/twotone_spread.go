@@ -8,36 +8,60 @@ const (
 )
 
 // fade looks at the carrier's fading once both tones are known: the local's
-// line is followed over many seconds, and the carrier is what is left beside it.
+// line is taken away, and the carrier is what is left beside it.
 func (e *twoTone) fade(mid float64) {
-	if e.local < 0 || e.merged || !e.tr[e.local].live {
-		if e.local < 0 || e.held() == 0 {
-			e.sm.forget()
-		}
-		e.sm.beat = math.NaN()
+	e.sm.beat = math.NaN()
+	if e.merged || e.held() == 0 || !e.tr[e.local].live {
+		e.keepSlow()
 		return
 	}
 	l, c := &e.tr[e.local], &e.tr[1-e.local]
-	if !c.live {
-		e.sm.beat = math.NaN()
-		return
-	}
-	if !l.whole || l.at != mid {
-		e.sm.beat = math.NaN()
-		e.advance(l, c)
-		return
-	}
-	guess := model{l.at, l.phase, l.f, l.c, l.amp}
 	e.advance(l, c)
-	turning := math.Abs(guess.f-e.sm.loc.f-e.anchor.slope*(mid-e.sm.loc.at)) > 0.008+5*l.uf
+	if !l.whole || l.at != mid || !e.memory.known {
+		return
+	}
+	guess := model{l.at, l.phase, l.f, l.c, l.amp, l.uf}
+	slope, us := e.anchor.drift(mid)
+	dt := mid - e.sm.loc.at
+	turning := dt > 5 || math.Abs(guess.f-e.sm.loc.f-slope*dt) > 0.008+5*l.uf+3*us*dt
 	e.sm.loc, e.sm.span, e.sm.lever = guess, 1, 0
 	if turning {
-		e.sm.beat = math.NaN()
 		e.sm.note(nil, mid)
-		e.sm.mean = c.f - l.f
+		if c.live {
+			e.sm.mean = c.f - l.f
+		}
 		return
 	}
+	gone := !c.live
+	if gone { // in a fade, or gone: is there power where it should be?
+		if c.band == nil || c.band != l.band {
+			return
+		}
+		c.f, _ = e.anchor.when(mid)
+	}
 	e.lookBeside(c, mid)
+	if gone && !math.IsNaN(e.sm.beat) && e.sm.power > 8*e.sm.powerU {
+		c.live, c.tail, c.whole, c.at = true, true, false, mid
+		c.f = l.f + e.sm.beat
+	}
+}
+
+// keepSlow keeps the slow ring going around whatever is held.
+func (e *twoTone) keepSlow() {
+	if len(e.bands) != 1 {
+		return
+	}
+	sum, n := 0.0, 0.0
+	for k := range e.tr {
+		if e.tr[k].live {
+			sum += e.tr[k].f
+			n++
+		}
+	}
+	if n > 0 {
+		e.slow.aim(sum / n)
+	}
+	e.slow.advance(e.bands[0])
 }
 
 // near reports whether both tones fit into the slow ring.
@@ -79,6 +103,9 @@ func (e *twoTone) lookBeside(c *track, mid float64) {
 	g := b.gain(e.sm.loc.f + want - b.centre)
 	a2 := e.sm.loc.amp * e.sm.loc.amp
 	e.sm.sigma = e.sm.width(n0 / (g * g) * phasorRate / a2)
+	if e.sm.n%(5*phasorRate) == 0 {
+		e.sm.steady = e.sm.inOneLine(n0 / (g * g) * phasorRate / a2)
+	}
 }
 
 // noiseBeside returns the density of the noise around f, with both tones and
@@ -101,44 +128,68 @@ func (e *twoTone) noiseBeside(ln *lens, b *band, f, mid float64) float64 {
 
 // isSpread reports whether the carrier is too wide to be followed as a line.
 func (e *twoTone) isSpread() bool {
-	return e.local >= 0 && !e.merged && e.sm.span >= 2 && e.sm.sigma > wideSpread && e.sm.slowly > 0
+	return e.local >= 0 && e.held() > 0 && e.sm.sigma > wideSpread && e.sm.slowly > 0 && e.sm.steady < 0.5
 }
 
-// followSpread follows the local's line and the carrier's power beside it
-// through the second around mid. It returns false when the line is lost.
+// followSpread finds the local's line in the carrier's smear and measures the
+// carrier's power beside it, in the second around mid. It returns false when
+// the line is not found.
 func (e *twoTone) followSpread(mid float64) bool {
 	l, c := &e.tr[e.local], &e.tr[1-e.local]
-	if !e.near(c, l) {
+	if l.band == nil || !e.merged && !e.near(c, l) {
 		return false
 	}
+	b := l.band
 	e.advance(l, c)
-	if !e.sm.follow(l.band, mid+0.5, e.sm.loc) {
+	end := mid + 0.5
+	g := b.gain(l.f - b.centre)
+	carrier, _ := e.anchor.when(end)
+	slope, us := e.anchor.drift(end)
+	x := seek{end: end, amp: e.memory.ampL * g, slope: slope, us: us}
+	x.lo, x.hi = 0.6*x.amp, 1.6*x.amp
+	x.haze = haze{e.sm.slowly, e.sm.sigma, carrier, max(l.noise*g*g, 1e-12*x.amp*x.amp)}
+	x.f, x.reach = e.sm.loc.when(end), 0.7
+	if e.sm.span == 0 { // anywhere about the carrier
+		x.f, x.reach = carrier, 4
+	}
+	if !e.sm.find(b, &x) {
+		e.lostLine++
 		return false
 	}
+	if e.lostLine > 0 {
+		e.count.broken()
+		e.lostLine = 0
+	}
+	e.merged = false
 	m := &e.sm.loc
-	d := mid - m.at
-	if r := m.amp / l.amp; r < 0.5 || r > 2 {
-		return false
-	}
-	l.f, l.c, l.at, l.amp = m.f+m.c*d, m.c, mid, m.amp
+	l.live, l.band = true, b
+	l.f, l.c, l.at, l.amp, l.uf = m.when(mid), m.c, mid, m.amp, m.uf
 	l.phase = m.turnsAt(mid)
 	l.whole, l.tail = true, true
 	l.seen++
+	if !c.live {
+		noise := c.noise
+		*c = track{noise: noise, ev: c.ev}
+	}
+	c.band, c.live = b, true
+	c.f, c.at = carrier-slope*0.5, mid
 	e.lookBeside(c, mid)
+	c.tail, c.whole = true, false
 	if math.IsNaN(e.sm.beat) {
-		if e.dim++; e.dim > 20 || e.sm.span < 2 {
+		if e.dim++; e.dim > 20 {
 			return false
 		}
-		c.whole = false
 		return true
 	}
 	e.dim = 0
-	c.f, c.c, c.at = l.f+e.sm.beat, l.c, mid
-	g := c.band.gain(c.f - c.band.centre)
-	c.amp = math.Sqrt(e.sm.power) / g
+	c.f, c.c, c.at = l.f+e.sm.beat, slope, mid
+	c.amp = math.Sqrt(e.sm.power) / b.gain(c.f-b.centre)
+	if !(c.noise > 0) {
+		c.noise = l.noise
+	}
 	c.phase = l.phase + e.sm.phase
 	c.uf = e.sm.u
-	c.whole, c.tail = true, true
+	c.whole = true
 	c.seen++
 	return true
 }

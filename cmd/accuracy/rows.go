@@ -14,6 +14,7 @@ import (
 func table() []row {
 	var t []row
 	t = append(t, closeRows()...)
+	t = append(t, zeroRows()...)
 	t = append(t, fadingRows()...)
 	return t
 }

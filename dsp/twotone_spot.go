@@ -1,0 +1,112 @@
+package dsp
+
+import (
+	"math"
+)
+
+const (
+	spotSpan  = 8.0  // how long a line has to stand still to be told from a smear, s
+	spotReach = 12.0 // Hz
+)
+
+// spot looks for a line that stands still beside a carrier that does not: over
+// some seconds a local's tone is one line, while a carrier smeared by Doppler
+// spreads its power. Where that is plain, it settles which is which, also where
+// the carrier is too wide to be followed as a line.
+func (e *twoTone) spot(mid float64) bool {
+	if e.merged || len(e.bands) != 1 || math.Abs(e.cfg.SetOff()) >= 10 || e.cfg.Wired {
+		return false
+	}
+	b, st := e.bands[0], &e.pair.st
+	e.slow.fetch(st, mid+0.5, spotSpan, e.slow.centre, int(math.Ceil(spotSpan*2.2*spotReach)))
+	if st.valid < 0.95 {
+		return false
+	}
+	p := e.pair
+	p.fit.r = append(p.fit.r[:0], st.z...)
+	f, _ := p.peak(-spotReach, spotReach, 0, math.NaN(), 0)
+	f, c, _, a := e.lineAt(st, f)
+	if a == 0 {
+		return false
+	}
+	p.subtract(a, f, c)
+	a2 := real(a)*real(a) + imag(a)*imag(a)
+	n0 := e.floor(b, f+st.centre)
+	// What is left within a hertz of the line is its own unsteadiness, or a
+	// carrier's; further out it is the carrier's, if there is one.
+	var beside, far, far1, far2 float64
+	step := 1 / spotSpan
+	for g := -spotReach; g <= spotReach; g += step {
+		d := (p.fit.density(st, g) - n0) * step
+		if math.Abs(g-f) < 0.7 {
+			beside += d
+			continue
+		}
+		far += d
+		far1 += d * g
+		far2 += d * g * g
+	}
+	if far <= 0 || beside > 0.5*a2 || a2*spotSpan < 40*n0 {
+		return false
+	}
+	mean := far1 / far
+	width := math.Sqrt(max(0, far2/far-mean*mean))
+	if far < 20*n0/spotSpan+8*n0*math.Sqrt(2*spotReach/spotSpan) || far < 0.02*a2 || width < 0.15 || width > 4 {
+		return false
+	}
+	// The carrier must not be a line of its own.
+	g2, d2 := p.peak(mean-3*width, mean+3*width, 0, f, 0.7)
+	if d2*step > 0.7*far || math.Abs(g2-f) < 0.7 {
+		return false
+	}
+	if e.spotted == 0 || math.Abs(f+st.centre-e.spotAt) > 0.1 {
+		e.spotted = 0
+	}
+	e.spotAt = f + st.centre
+	if e.spotted++; e.spotted < 3 {
+		return false
+	}
+	e.spotted = 0
+	e.settle(b, mid, f+st.centre, mean+st.centre, math.Sqrt(a2), far, width, n0)
+	return true
+}
+
+// lineAt fits one line near f in the stretch.
+func (e *twoTone) lineAt(st *stretch, f float64) (f1, c, uf float64, a complex128) {
+	w := &e.sm.white
+	w.set(haze{n0: 1, sigma: 1}, st.dt, 0)
+	w.take(st)
+	return w.refine(f, 0, e.anchor.slope, 0.02)
+}
+
+// floor returns the density of the noise in band b around f, tones left out.
+func (e *twoTone) floor(b *band, f float64) float64 {
+	l := e.lens
+	l.open(b, float64(e.last)+0.5, 1, edge)
+	l.spec.take(l.win.z)
+	l.specOf = -1
+	e.avoid = append(e.avoid[:0], f-b.centre)
+	n0 := l.spec.noise(f-b.centre, 60, b.half, spotReach+3, e.avoid)
+	if math.IsNaN(n0) {
+		n0 = l.spec.noise(f-b.centre, b.rate, b.rate, 0, nil)
+	}
+	return n0
+}
+
+// settle takes the line for the local and what lies beside it for the carrier.
+func (e *twoTone) settle(b *band, mid, line, carrier, amp, power, width, n0 float64) {
+	e.local = 1
+	g := b.gain(line - b.centre)
+	c, l := &e.tr[0], &e.tr[1]
+	*c = track{live: true, band: b, f: carrier, at: mid, amp: math.Sqrt(power) / g, noise: n0 / (g * g), tail: true}
+	*l = track{live: true, band: b, f: line, at: mid, amp: amp / g, noise: n0 / (g * g), tail: true, whole: true, uf: 0.01}
+	e.memory = pairMemory{known: true, at: mid, carrier: carrier, local: line, ampC: c.amp, ampL: l.amp}
+	e.anchor.forget()
+	e.anchor.scatter = width
+	e.anchor.add(mid, carrier, width)
+	e.sm.forget()
+	e.sm.loc = model{at: mid, f: line, amp: l.amp}
+	e.sm.span = 4
+	e.sm.sigma, e.sm.slowly, e.sm.mean = width, power, carrier-line
+	e.why = "the other tone is smeared by Doppler, this one stands still"
+}
