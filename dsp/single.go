@@ -1,9 +1,6 @@
 package dsp
 
-import (
-	"fmt"
-	"math"
-)
+import "math"
 
 const (
 	maxSpan  = 8.0  // the longest window a slow beat is given, s
@@ -22,28 +19,29 @@ type single struct {
 	lens *lens
 	gl   *lens
 
-	zero    *band // around 0 Hz, always there
-	tone    *band // where the tone is: zero, or a band of its own
-	t       track
-	count   phaseCount
-	from    float64 // sound before this is of no use: a gap, or a jump
-	x, q    []float32
-	tooSlow bool
+	zero  *band // around 0 Hz, always there
+	tone  *band // where the tone is: zero, or a band of its own
+	t     track
+	count phaseCount
+	from  float64 // sound before this is of no use: a gap, or a jump
+	torn  int     // seconds in a row that the tone was not there from end to end of its window
+	x, q  []float32
+	rest  *resting // the beat when it is too slow for windows of seconds
 }
 
 func newSingle(cfg *Config, p *plan, r *raw) *single {
 	iq := cfg.Hookup == Quadrature
 	s := &single{cfg: cfg, plan: p, raw: r, lens: newLens(p, iq), gl: newLens(p, iq),
-		acq: newAcquirer(cfg.Rate, cfg.SearchLow, cfg.SearchHigh, iq)}
+		acq: newAcquirer(cfg.Rate, cfg.SearchLow, cfg.SearchHigh, iq), rest: newResting(cfg, p)}
 	s.zero = newBand(p, 0, iq, 0, int((maxSpan+3)*p.outRate()))
-	lo, n := 0.0, 64
+	lo, hi, n := 0.0, min(slowBand, 0.45*p.outRate()), 64
 	if iq {
-		lo = -slowBand
+		lo = -hi
 	}
 	for float64(n) < maxSpan*p.outRate() {
 		n *= 2
 	}
-	s.slow = newAcquirerN(p.outRate(), lo, min(slowBand, 0.45*p.outRate()), iq, n)
+	s.slow = newAcquirerN(p.outRate(), lo, hi, iq, n)
 	return s
 }
 
@@ -60,7 +58,9 @@ func (s *single) gap(next int64) {
 		s.tone.restart(next)
 	}
 	s.from = float64(next) / s.cfg.Rate
-	s.count.broken()
+	if !s.rest.held { // a slow beat is known well enough to be counted on
+		s.count.broken()
+	}
 }
 
 // span returns the window for a beat of f Hz, or 0 when none would do.
@@ -79,22 +79,77 @@ func (s *single) span(f float64) float64 {
 
 func (s *single) second(i int64) Reading {
 	end := float64(i + 1)
+	s.rest.ring.advance(s.zero)
 	jumped := false
-	if s.t.live && !s.hold(end) {
+	switch {
+	case s.rest.held:
+		jumped = s.followSlow(end)
+	case s.t.live && s.span(s.t.predict(end-0.5)) == 0:
+		s.rest.enter(end, maxSpan)
+		s.t = track{}
+	case s.t.live && (!s.hold(end) || s.gaveUp()):
 		s.t = track{}
 		s.count.broken()
 		s.from = max(s.from, end-1)
+		s.rest.start = max(s.rest.start, end-1)
 		jumped = true
 	}
-	if !s.t.live {
+	if !s.t.live && !s.rest.held {
 		s.begin(end)
-		jumped = jumped && s.t.live
+		s.beginResting()
+		jumped = jumped && (s.t.live || s.rest.known)
+	} else if s.t.live && i%8 == 7 {
+		s.beginResting()
 	}
-	r := s.reading(float64(i) + 0.5)
+	t := float64(i) + 0.5
+	r := Reading{}
+	if s.t.live {
+		r = s.reading(t)
+	} else {
+		r = s.readingAtRest(t, end)
+	}
 	if jumped {
 		r.flag(Retuned)
 	}
 	return r
+}
+
+// gaveUp reports whether a slow beat has not been in one piece for so long that
+// it is better looked for anew: the trimmer may have left it anywhere.
+func (s *single) gaveUp() bool {
+	if s.torn++; s.t.whole {
+		s.torn = 0
+	}
+	return s.torn > 3 && s.tone == s.zero && math.Abs(s.t.f) < 1.5
+}
+
+// followSlow follows a slow beat, and leaves it to windows of seconds when it
+// became faster. It reports whether the trimmer was turned.
+func (s *single) followSlow(end float64) bool {
+	jumped := s.rest.follow()
+	switch {
+	case s.rest.held && math.Abs(s.rest.fit.x.f) > handOver:
+		s.rest.held = false
+	case s.rest.held:
+		return false
+	case jumped:
+		s.count.broken()
+		s.from = max(s.from, min(s.rest.start, end-1))
+	}
+	return jumped
+}
+
+// beginResting looks for a beat that is slower than windows of seconds can
+// hold. A tone that is held stays unless what moves around 0 Hz is stronger.
+func (s *single) beginResting() {
+	if s.t.live && (s.tone == s.zero && math.Abs(s.t.f) < slowBand || s.rest.swing() < 2*s.t.amp) {
+		return
+	}
+	s.rest.search()
+	if s.rest.held && s.t.live {
+		s.t = track{}
+		s.count.broken()
+	}
 }
 
 // hold follows the tone through the second that ends at end.
@@ -102,7 +157,6 @@ func (s *single) hold(end float64) bool {
 	f := s.t.predict(end - 0.5)
 	span := s.span(f)
 	if span == 0 {
-		s.tooSlow = true
 		return false
 	}
 	if end-span < s.from-0.01 { // not enough sound since the gap: wait
@@ -153,7 +207,6 @@ func (s *single) begin(end float64) {
 			break
 		}
 	}
-	s.tooSlow = false
 	if l := s.beginSlow(end); l.amp > best.amp {
 		best = l
 	}
@@ -167,7 +220,6 @@ func (s *single) begin(end float64) {
 	}
 	span := s.span(best.f)
 	if span == 0 {
-		s.tooSlow = true
 		return
 	}
 	s.t = track{}
@@ -216,32 +268,32 @@ func (s *single) beginSlow(end float64) found {
 	return found{}
 }
 
-// reading says what the last second said. The level and C/N0 of the beat note
-// stand in the carrier's columns: that is whose strength they follow.
+// reading says what the last second said of a tone that windows of seconds
+// hold. The level and C/N0 of the beat note stand in the carrier's columns: that
+// is whose strength they follow.
 func (s *single) reading(t float64) Reading {
-	r := Blank(t, Searching)
+	r := Blank(t, Apart)
 	r.PhaseRun = s.count.run
-	r.Why = "no tone stands out of the noise"
-	if s.tooSlow {
-		r.State = Merged
-		r.Why = fmt.Sprintf("the beat is slower than %.2g Hz: a longer span is needed", cycles/maxSpan)
-		return r
-	}
-	if !s.t.live {
-		return r
-	}
-	r.State, r.Why = Apart, ""
-	scale := 1 + s.cfg.SampleRateError
 	r.CarrierDBFS = 20 * math.Log10(s.t.amp)
 	r.CarrierCN0 = 10 * math.Log10(s.t.cn0())
 	if !s.t.whole {
 		r.Why = "the beat was not there, or jumped, within the span"
 		return r
 	}
-	sign := s.cfg.sign()
-	d0 := s.cfg.SetOff()
 	f := s.t.f
-	r.BeatAbs, r.BeatU, r.Span = math.Abs(f)*scale, s.t.uf*scale, 2*s.lens.win.half
+	sign := s.say(&r, f, s.t.uf, 2*s.lens.win.half)
+	dt := t - s.t.at
+	r.Phase = s.count.next(t, sign*(s.t.phase+f*dt+s.t.c*dt*dt/2), sign*(f+s.t.c*dt), s.t.uf)
+	r.PhaseRun = s.count.run
+	return r
+}
+
+// say fills in the beat of f +- u Hz, with its sign where that is known, and
+// returns the sign that its phase counts with.
+func (s *single) say(r *Reading, f, u, span float64) float64 {
+	scale := 1 + s.cfg.SampleRateError
+	sign, d0 := s.cfg.sign(), s.cfg.SetOff()
+	r.BeatAbs, r.BeatU, r.Span = math.Abs(f)*scale, u*scale, span
 	known := s.cfg.signed()
 	if !known {
 		sign = 1
@@ -251,20 +303,18 @@ func (s *single) reading(t float64) Reading {
 			r.Why = "sign from the set-off"
 		}
 	}
-	dt := t - s.t.at
-	r.Phase = s.count.next(t, sign*(s.t.phase+f*dt+s.t.c*dt*dt/2), sign*(f+s.t.c*dt), s.t.uf)
-	r.PhaseRun = s.count.run
 	if known {
 		r.Beat = sign * f * scale
 		r.Error = r.Beat - d0
 		r.Offset = r.Error / s.cfg.Local
 		r.OffsetU = r.BeatU / s.cfg.Local
 	}
-	return r
+	return sign
 }
 
 func (s *single) glimpse(from, upto float64, g *Glimpse) {
 	if !s.t.live {
+		s.glimpseAtRest(from, upto, g)
 		return
 	}
 	g.State = Apart
