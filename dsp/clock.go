@@ -30,8 +30,7 @@ const (
 	clockGood   = 20e-6   // an estimate with a greater u is none
 	clockWander = 0.05e-6 // random walk of e, in an hour: 0.1 ppm in 4 h, as a crystal's does with the room (common practice)
 	hostRate    = 0.05e-6 // what a disciplined host clock's own rate is off by (from memory)
-	pathRate    = 0.1e-6  // greatest mean fractional Doppler of an HF path, and
-	pathDelay   = 0.3e-3  // by how much its delay changes over hours, s (both from memory)
+	pathDelay   = 0.3e-3  // by how much an HF path's delay changes over a span, s (from memory)
 	keepMinutes = 360     // points kept by either
 )
 

@@ -2,7 +2,6 @@ package dsp
 
 import (
 	"math"
-	"slices"
 
 	blas "gonum.org/v1/gonum/blas/gonum"
 )
@@ -25,8 +24,8 @@ import (
 // one line make a find. By chance they lie so about once in lockOdds.
 //
 // Once found, only the sound about every expected pulse is looked at, and every
-// tenth minute all of it, so that a false find is let go and another epoch is
-// noticed. While nothing is found after twelve minutes, two minutes in fifteen
+// fifteenth minute all of it, so that a false find is let go and another epoch is
+// noticed. While nothing is found after twelve minutes, two minutes in twenty
 // are listened to, and whatever looks like a pulse makes it listen on.
 type pulses struct {
 	rate    float64
@@ -36,7 +35,7 @@ type pulses struct {
 	spots   []spot // one a minute in which the pulses were heard
 
 	heard  []float64 // tones that the bands are made for
-	bands  [maxPulseBands]pulseBand
+	bands  [pulseBands]pulseBand
 	hann   []float64
 	buf, q []float32 // of the sound wanted
 	lo, hi int64     // which is samples lo..hi
@@ -55,6 +54,7 @@ type pulses struct {
 	gates    int
 	gateTime float64 // sum of their times
 	gateBand int
+	again    spot // heard once after silence
 
 	eager  float64 // until this minute every one is listened to
 	misses int     // minutes since the pulses were heard
@@ -72,20 +72,23 @@ const (
 )
 
 const (
-	perSecond     = 500
-	pulseWindow   = 0.007 // s
-	stretchLong   = 4     // s that are folded as if e were 0
-	stretchN      = 60 / stretchLong
-	gateHalf      = 12
-	gateFrames    = 2*gateHalf + 1
-	maxPulseBands = 12
-	pulseMargin   = 0.035 // s of sound kept beyond the second
-	foldSteps     = 15    // either side of 0
-	foldStep      = clockRange / foldSteps
-	keepOut       = 350.0 // Hz about a tone in which no band may lie
+	perSecond   = 500
+	pulseWindow = 0.007 // s
+	stretchLong = 4     // s that are folded as if e were 0
+	stretchN    = 60 / stretchLong
+	gateHalf    = 12
+	gateFrames  = 2*gateHalf + 1
+	pulseBands  = 2 * 7 // about two centres: three offsets on both sides, and a witness
+	pulseMargin = 0.035 // s of sound kept beyond the second
+	foldSteps   = 15    // either side of 0
+	foldStep    = clockRange / foldSteps
+	keepOut     = 350.0 // Hz about a tone in which no band may lie
 )
 
-var pulseOffsets = [3]float64{1000, 1200, 1500} // Hz from the carrier's tone
+// pulseOffsets are the bands' distances from the carrier's tone, Hz. In the last
+// one no pulses are looked for: it tells clicks from them, on the side where there
+// is more room in a receiver's passband.
+var pulseOffsets = [7]float64{1000, 1200, 1500, -1000, -1200, -1500, 700}
 
 // pulseBand is one place where the pulses may be heard.
 type pulseBand struct {
@@ -137,8 +140,11 @@ func (p *pulses) aim(hz []float64) {
 		centres[0], centres[1] = (centres[0]+centres[1])/2, math.NaN()
 	}
 	for i := range p.bands {
-		side := 1 - 2*float64(i/3%2)
-		p.place(&p.bands[i], centres[i/6]+side*pulseOffsets[i%3])
+		centre, off := centres[i/7], pulseOffsets[i%7]
+		if i%7 == 6 && centre > 1300 {
+			off = -off
+		}
+		p.place(&p.bands[i], centre+off)
 	}
 }
 
@@ -264,9 +270,9 @@ func (p *pulses) listening() bool {
 	if len(p.heard) == 0 {
 		return false
 	}
-	due := p.minute < p.eager || math.Mod(p.minute, 15) < 2
+	due := p.minute < p.eager || math.Mod(p.minute, 20) < 2
 	if p.locked && p.misses < 12 {
-		due = p.misses >= 2 || math.Mod(p.minute, 10) == 0
+		due = p.misses >= 2 || math.Mod(p.minute, 15) == 0
 	}
 	return due
 }
@@ -289,9 +295,7 @@ func (p *pulses) window(t float64) int {
 
 // level turns powers into log(1 + power/median), in place.
 func (p *pulses) level(f []float32) bool {
-	s := append(p.sorted[:0], f...)
-	slices.Sort(s)
-	m := s[len(s)/2]
+	m := middling(append(p.sorted[:0], f...))
 	if !(m > 0) {
 		return false
 	}
@@ -301,12 +305,50 @@ func (p *pulses) level(f []float32) bool {
 	return true
 }
 
+// middling returns the middle value of s by size, which it reorders (Hoare's
+// selection).
+func middling(s []float32) float32 {
+	k, lo, hi := len(s)/2, 0, len(s)-1
+	for lo < hi {
+		m, i, j := s[(lo+hi)/2], lo, hi
+		for i <= j {
+			for s[i] < m {
+				i++
+			}
+			for s[j] > m {
+				j--
+			}
+			if i <= j {
+				s[i], s[j] = s[j], s[i]
+				i++
+				j--
+			}
+		}
+		switch {
+		case k <= j:
+			hi = j
+		case k >= i:
+			lo = i
+		default:
+			return s[k]
+		}
+	}
+	return s[k]
+}
+
+// used says whether band b is listened to: while the pulses are held only theirs
+// is, and the one that tells clicks.
+func (p *pulses) used(b int) bool {
+	held := p.locked && p.misses < 2
+	return p.bands[b].on && (!held || b == p.gateBand || b%7 == 6 && b/7 == p.gateBand/7)
+}
+
 // second adds the whole second to the folds.
 func (p *pulses) second() {
 	j := int(math.Mod(p.sec, 60)) / stretchLong
 	for b := range p.bands {
 		band := &p.bands[b]
-		if !band.on {
+		if !p.used(b) {
 			continue
 		}
 		f := p.frames[:perSecond]
@@ -388,13 +430,13 @@ func (p *pulses) heardAgain() {
 	base /= count
 	scatter := math.Sqrt(max(1e-12, var2/count-base*base) * count / (count - 1))
 	top, at := 0.0, 0
-	for k := gateHalf - 5; k <= gateHalf+5; k++ {
+	for k := gateHalf - 3; k <= gateHalf+3; k++ {
 		if v := float64(p.gate[k-1]+2*p.gate[k]+p.gate[k+1])/4/n - base; v > top {
 			top, at = v, k
 		}
 	}
 	p.misses++
-	if top < 3.5*scatter {
+	if top < 4*scatter {
 		return
 	}
 	var sum, moment float64
@@ -403,9 +445,18 @@ func (p *pulses) heardAgain() {
 		sum += v
 		moment += v * float64(k-gateHalf)
 	}
-	p.misses = 0
 	t, late := p.gateTime/n, moment/sum/perSecond
-	p.add(spot{t: t, x: p.trend.when(t) + late, s: math.Hypot(1e-4, 3e-3*scatter/top)})
+	x := spot{t: t, x: p.trend.when(t) + late, s: math.Hypot(1e-4, 3e-3*scatter/top)}
+	if p.misses > 3 { // after silence once is not enough: it may be noise, and far off in time would weigh much
+		first := p.again
+		p.again = x
+		if x.t-first.t > 200 || math.Abs(p.trend.wrapped(x.x-first.x-p.trend.b*(x.t-first.t))) > 0.002 {
+			return
+		}
+		p.add(first)
+	}
+	p.misses = 0
+	p.add(x)
 	p.refit(p.trend.b)
 }
 
@@ -420,7 +471,7 @@ func (p *pulses) add(s spot) {
 
 // refit draws the line anew.
 func (p *pulses) refit(b float64) {
-	p.told = p.trend.choose(p.spots, b, func(span float64) float64 { return min(pathRate, pathDelay/span) })
+	p.told = p.trend.choose(p.spots, b, func(span float64) float64 { return pathDelay / span })
 	p.told.ok = p.told.ok && len(p.spots) >= 4 && p.told.span >= 200 && p.told.u <= clockGood
 }
 
@@ -428,7 +479,7 @@ func (p *pulses) refit(b float64) {
 func (p *pulses) judge() {
 	best := candidate{t: 60*p.minute + 30}
 	for b := range p.bands {
-		if p.bands[b].on {
+		if p.bands[b].on && b%7 != 6 {
 			if c := p.look(b); c.good && !best.good || c.good == best.good && c.z > best.z {
 				best = c
 			}
@@ -451,7 +502,9 @@ func (p *pulses) judge() {
 			p.found = p.found[:copy(p.found, p.found[1:])]
 		}
 		p.found = append(p.found, best)
-		p.eager = max(p.eager, p.minute+6)
+		if best.z > 5.2 {
+			p.eager = max(p.eager, p.minute+6)
+		}
 		p.find()
 	}
 }
@@ -507,9 +560,7 @@ func (p *pulses) near(k int) (top, flank float64) {
 // it is short and the only one.
 func (p *pulses) shaped(c *candidate, k int) bool {
 	n := float32(p.seconds)
-	s := append(p.sorted[:0], p.fold[:]...)
-	slices.Sort(s)
-	middle := float64(s[perSecond/2])
+	middle := float64(middling(append(p.sorted[:0], p.fold[:]...)))
 	top, flank := p.near(k)
 	second := 0.0
 	for i := range p.fold {
@@ -519,8 +570,7 @@ func (p *pulses) shaped(c *candidate, k int) bool {
 			second = max(second, t-f)
 		}
 	}
-	slices.Sort(p.frames[:perSecond])
-	scatter := 1.4826 * float64(p.frames[perSecond/2])
+	scatter := 1.4826 * float64(middling(p.frames[:perSecond]))
 	c.z = (top - flank) / max(scatter, 1e-6*float64(n))
 	var sum, moment float64
 	for i := -4; i <= 4; i++ {
@@ -535,7 +585,7 @@ func (p *pulses) shaped(c *candidate, k int) bool {
 }
 
 // click reports whether what stands at frame k stands as high in a band at least
-// 300 Hz away.
+// 300 Hz nearer to the carrier or farther from it, on whichever side.
 func (p *pulses) click(c *candidate, k int) bool {
 	n := float64(p.seconds)
 	rise := func() float64 {
@@ -548,7 +598,8 @@ func (p *pulses) click(c *candidate, k int) bool {
 	}
 	own := math.Exp(rise()) - 1
 	for b := range p.bands {
-		if x := &p.bands[b]; x.on && math.Abs(x.hz-p.bands[c.band].hz) >= 299 {
+		apart := math.Abs(math.Abs(pulseOffsets[b%7]) - math.Abs(pulseOffsets[c.band%7]))
+		if p.bands[b].on && b/7 == c.band/7 && apart >= 300 {
 			p.foldAt(b, c.e)
 			// Frames of noise scatter by about 0.6; two of them are in a pulse.
 			if h := rise(); h > 3*0.6/math.Sqrt(2*n) && math.Exp(h)-1 > own/4 {
