@@ -51,9 +51,10 @@ func (c *clock) gap(next int64) {
 	c.pulses.gap(next)
 }
 
-// tones tells where the steady tones are now, Hz of audio: pulses are looked for
-// 1000 to 1500 Hz to either side of them. For the output of an AM detector or a
-// mixer, tell 0. An empty list leaves what was told before.
+// tones tells where the steady tones are now, Hz of audio, carrier and local
+// first: pulses are looked for 1000 to 1500 Hz to either side of these two, and
+// nowhere near any. For the output of an AM detector or a mixer, tell 0. An empty
+// list leaves what was told before.
 func (c *clock) tones(hz ...float64) { c.pulses.aim(hz) }
 
 // mark says that the host's clock showed at when sample n had just arrived.
@@ -143,6 +144,8 @@ type trend struct {
 	at    float64 // s
 	used  int     // points
 	steps int     // jumps
+	sets  int     // those of them that are less than two seconds,
+	setBy float64 // and their sum, s
 
 	run  []int // of each point: which stretch it belongs to, -1: stray
 	r, w []float64
@@ -168,7 +171,7 @@ func (tr *trend) fit(p []spot, b float64) bool {
 	tr.run, tr.r, tr.w = resize(tr.run, n), resize(tr.r, n), resize(tr.w, n)
 	tr.e, tr.abs = resize(tr.e, n), resize(tr.abs, n)
 	tr.b, tr.at = b, p[n-1].t
-	for pass := range 3 {
+	for pass := range 2 {
 		tol := tr.jump
 		if pass == 0 {
 			tol *= 2
@@ -180,7 +183,7 @@ func (tr *trend) fit(p []spot, b float64) bool {
 				tr.w[i] = 1 / (p[i].s * p[i].s)
 			}
 		}
-		for range 6 {
+		for range 4 {
 			if !tr.solve(p) {
 				return false
 			}
@@ -197,7 +200,7 @@ func (tr *trend) stretches(p []spot, tol float64) {
 	run, k := 0, 0
 	var level float64
 	off := func(i int, from float64) float64 { return tr.wrapped(p[i].x - tr.b*(p[i].t-tr.at) - from) }
-	tr.steps = 0
+	tr.steps, tr.sets, tr.setBy = 0, 0, 0
 	for i := range p {
 		if k == 0 {
 			level = off(i, 0)
@@ -215,6 +218,10 @@ func (tr *trend) stretches(p []spot, tol float64) {
 			}
 			run++
 			tr.steps++
+			if math.Abs(d) < 2 {
+				tr.sets++
+				tr.setBy += d
+			}
 			level, d, k = here, 0, 0
 		}
 		tr.run[i], tr.r[i] = run, level+d
@@ -364,22 +371,28 @@ func (tr *trend) scatter(p []spot) bool {
 // when returns the trend's x at time t.
 func (tr *trend) when(t float64) float64 { return tr.level + tr.b*(t-tr.at) }
 
-// choose fits the latest points of p over spans of all, half, a quarter and an
-// eighth of it, and returns what the one says that knows most about e at the end:
+// choose fits the latest points of p over spans of all, half and a quarter of
+// it, and returns what the one says that knows most about e at the end:
 // long spans have little scatter, short ones have wandered less. extra is the
 // source's own uncertainty over a span, s. The trend is left fitted to it.
+//
+// A clock that is set right by a little again and again keeps no time of its own
+// between: by what it is set, over the time, is a part of u.
 func (tr *trend) choose(p []spot, b float64, extra func(span float64) float64) told {
-	best, from := told{u: math.Inf(1)}, 0
+	best, from, astray := told{u: math.Inf(1)}, 0, 0.0
 	try := func(i int) (told, bool) {
 		if !tr.fit(p[i:], b) {
 			return told{}, false
 		}
 		span := p[len(p)-1].t - p[i].t
 		scale := 1 / (1 - tr.b)
-		u := math.Sqrt(sq(tr.u) + sq(extra(span)) + sq(wander(span)))
+		if i == 0 && tr.period == 0 && tr.sets >= 2 {
+			astray = tr.setBy / span
+		}
+		u := math.Sqrt(sq(tr.u) + sq(extra(span)) + sq(wander(span)) + sq(astray))
 		return told{tr.b * scale, u * scale * scale, span, p[len(p)-1].t, true}, true
 	}
-	for k := 1; k <= 8; k *= 2 {
+	for k := 1; k <= 4; k *= 2 {
 		i := 0
 		for i < len(p) && p[len(p)-1].t-p[i].t > (p[len(p)-1].t-p[0].t)/float64(k)+1 {
 			i++

@@ -2,6 +2,7 @@ package dsp
 
 import (
 	"math"
+	"slices"
 
 	blas "gonum.org/v1/gonum/blas/gonum"
 )
@@ -21,7 +22,8 @@ import (
 // its best pulse noted if it stands out, is short, is the only one in the second
 // (a beat of 2 Hz or more makes as many humps; one of 1 Hz a long one), and is not
 // as strong in a band 300 Hz away (a click). Four of the latest twelve minutes on
-// one line make a find. By chance they lie so about once in lockOdds.
+// one line make a find. Chance candidates in every single minute would make one in
+// 7000 h; noise makes one in seven minutes or fewer, and so no find in a lifetime.
 //
 // Once found, only the sound about every expected pulse is looked at, and every
 // fifteenth minute all of it, so that a false find is let go and another epoch is
@@ -118,7 +120,7 @@ func newPulses(rate float64, isComplex bool) *pulses {
 
 // aim puts the bands beside the tones, if those have moved.
 func (p *pulses) aim(hz []float64) {
-	if len(hz) == 0 || len(hz) > 2 {
+	if len(hz) == 0 || slices.ContainsFunc(hz, math.IsNaN) {
 		return
 	}
 	moved := len(p.heard) != len(hz)
@@ -131,11 +133,11 @@ func (p *pulses) aim(hz []float64) {
 	if p.heard == nil {
 		p.frames, p.sorted = make([]float32, perSecond), make([]float32, perSecond)
 		p.spots, p.found = make([]spot, 0, keepMinutes), make([]candidate, 0, 12)
-		p.heard = make([]float64, 0, 2)
+		p.heard = make([]float64, 0, 8)
 		p.eager = p.minute + 13
 	}
 	p.heard = append(p.heard[:0], hz...)
-	centres := [2]float64{hz[0], hz[len(hz)-1]}
+	centres := [2]float64{hz[0], hz[min(1, len(hz)-1)]}
 	if math.Abs(centres[0]-centres[1]) < 120 {
 		centres[0], centres[1] = (centres[0]+centres[1])/2, math.NaN()
 	}
