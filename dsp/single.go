@@ -1,6 +1,9 @@
 package dsp
 
-import "math"
+import (
+	"math"
+	"math/cmplx"
+)
 
 const (
 	maxSpan  = 8.0  // the longest window a slow beat is given, s
@@ -283,9 +286,34 @@ func (s *single) reading(t float64) Reading {
 	f := s.t.f
 	sign := s.say(&r, f, s.t.uf, 2*s.lens.win.half)
 	dt := t - s.t.at
-	r.Phase = s.count.next(t, sign*(s.t.phase+f*dt+s.t.c*dt*dt/2), sign*(f+s.t.c*dt), s.t.uf)
+	ph := s.t.phase + f*dt + s.t.c*dt*dt/2 + s.lens.latest()
+	r.Phase = s.count.next(t, sign*ph, sign*(f+s.t.c*dt), s.t.uf)
 	r.PhaseRun = s.count.run
 	return r
+}
+
+// latest returns by how many turns the first line's phase in the last second of
+// a longer window differs from the fit's: windows overlap, seconds do not, and
+// whoever regresses the phase wants noise that is new in every second.
+func (l *lens) latest() float64 {
+	if l.win.half < 1 {
+		return 0
+	}
+	x := &l.lines[0]
+	sum, n := 0.0, 0.0
+	for i, r := range l.fit.r {
+		t := l.win.t0 + float64(i)*l.win.dt
+		if t < l.win.half-1 || t >= l.win.half || !l.win.ok[i] {
+			continue
+		}
+		m := x.a * cmplx.Rect(1, 2*math.Pi*x.f*t+math.Pi*x.c*t*t)
+		sum += imag(r * cmplx.Conj(m))
+		n++
+	}
+	if n == 0 {
+		return 0
+	}
+	return sum / n / (real(x.a)*real(x.a) + imag(x.a)*imag(x.a)) / (2 * math.Pi)
 }
 
 // say fills in the beat of f +- u Hz, with its sign where that is known, and

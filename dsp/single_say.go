@@ -1,6 +1,7 @@
 package dsp
 
 import (
+	"fmt"
 	"math"
 	"math/cmplx"
 )
@@ -10,9 +11,12 @@ func (s *single) readingAtRest(t, end float64) Reading {
 	r := Blank(t, Searching)
 	r.PhaseRun = s.count.run
 	r.Why = "no tone stands out of the noise"
-	if !s.rest.held {
+	if !s.rest.told() {
 		if s.rest.seen {
 			r.State, r.Why = Merged, s.rest.why
+		}
+		if s.rest.held {
+			r.Why = fmt.Sprintf("a beat about %.2g Hz shows: %.0f s more to be sure of it", math.Abs(s.rest.fit.x.f), math.Ceil(s.rest.proven-s.rest.ring.upto()))
 		}
 		return r
 	}
@@ -41,7 +45,7 @@ func (s *single) readingAtRest(t, end float64) Reading {
 // glimpseAtRest points the beat hand by the latest moments and says the beat as
 // the long fit has it, unless the hand shows that it is no longer so.
 func (s *single) glimpseAtRest(from, upto float64, g *Glimpse) {
-	if !s.rest.held {
+	if !s.rest.told() {
 		if s.rest.known {
 			g.State = Merged
 		}
@@ -81,4 +85,55 @@ func (s *single) glimpseAtRest(from, upto float64, g *Glimpse) {
 	}
 	ph *= sign
 	g.Turn = ph - math.Floor(ph)
+}
+
+// explain says what is known while no number can be defended, and whether
+// there is anything at all. The fit of try is still there.
+func (s *resting) explain(span float64) {
+	c := &s.fit
+	level, still := c.level()
+	most := 1.2 / span // a faster one would have been told
+	// More than a sound card's own offset, which stays below -60 dBFS (common
+	// practice), must stand or move at 0 Hz.
+	s.seen = s.known || level > 1e-3
+	if !s.seen {
+		return
+	}
+	if !still && math.Abs(c.x.f) > handOver && c.uAmp() < 0.3*cmplx.Abs(c.x.a) {
+		s.why = "listening to a faster beat"
+		return
+	}
+	if c.complex {
+		s.why = s.explainTurn(span, still)
+		return
+	}
+	a, f := cmplx.Abs(c.x.a), math.Abs(c.x.f)
+	switch more := 1/f - span; {
+	case still:
+		s.why = fmt.Sprintf("no beat beyond ±%.2g Hz: slower, at rest, or none at all", most)
+	case c.red == 1 && f > 0.2/span && c.uAmp() < 3*shakyAmp*a && more > 0:
+		s.why = fmt.Sprintf("the level turns slowly: within ±%.2g Hz, about %.0f s more are needed", most, math.Ceil(more))
+	default:
+		s.why = fmt.Sprintf("the level moves: within ±%.2g Hz, a whole cycle is needed", most)
+	}
+}
+
+// explainTurn bounds the beat of quadrature by how far its point has moved,
+// which takes a guess of its circle: at least half of what stands at 0 Hz.
+func (s *resting) explainTurn(span float64, still bool) string {
+	c := &s.fit
+	at, v, uv := c.drift()
+	within := min((cmplx.Abs(v)+2*uv)/(math.Pi*max(cmplx.Abs(at), 1e-9)), 1/span) // a whole turn would have been seen
+	if still {
+		return fmt.Sprintf("at rest within ±%.2g Hz, if no more than half of what stands at 0 Hz is the input's offset; or no beat at all", within)
+	}
+	more := 0.0
+	if rel := c.uAmp() / cmplx.Abs(c.x.a); rel > shakyAmp && rel < 3 {
+		more = span * (math.Pow(rel/shakyAmp, 0.4) - 1)
+	}
+	more = max(more, leastTurn/math.Abs(c.x.f)-span)
+	if c.red > 1 || !(more > 0 && more < ringSpan) {
+		return fmt.Sprintf("it turns slowly: within ±%.2g Hz, more of a turn is needed to tell the beat from the input's offset", within)
+	}
+	return fmt.Sprintf("it turns slowly: within ±%.2g Hz, about %.0f s more are needed to tell the beat from the input's offset", within, math.Ceil(more))
 }

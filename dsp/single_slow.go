@@ -1,22 +1,23 @@
 package dsp
 
 import (
-	"fmt"
 	"math"
 	"math/cmplx"
 )
 
 const (
-	handOver   = 0.45 // a beat faster than this is left to windows of seconds, Hz
-	slowLeast  = 8.0  // the shortest span of a slow beat, s
-	fitPoints  = 1024 // block means of a long fit, about
-	scanMost   = 128  // block means of a search
-	shorter    = 0.8 // the next shorter piece of sound in which a beat is looked for
-	leastTurn  = 0.06 // the part of a turn from which quadrature is believed
-	shakyAmp   = 0.1  // the relative uncertainty of the level up to which a fit stands by itself
-	steadyPart = 0.2  // of one second's noise: how well the offset must be known for its phase
-	jumpSigma  = 6.0  // a change of the trimmer stands this far out of the noise
-	bendSigma  = 4.5  // and a drift this far
+	handOver    = 0.45 // a beat faster than this is left to windows of seconds, Hz
+	slowLeast   = 8.0  // the shortest span of a slow beat, s
+	fitPoints   = 1024 // block means of a long fit, about
+	scanMost    = 128  // block means of a search
+	shorter     = 0.8  // the next shorter piece of sound in which a beat is looked for
+	foretell    = 0.1  // part of its span for which a new beat must hold before it is told
+	leastTurn   = 0.06 // the part of a turn from which quadrature is believed
+	shakyAmp    = 0.1  // the relative uncertainty of the level up to which a fit stands by itself
+	steadyPart  = 0.2  // of one second's noise: how well the offset must be known for its phase
+	clearMotion = 60.0 // how far the motion of a new beat stands out of the noise: an input's own wandering must not pass
+	jumpSigma   = 6.0  // a change of the trimmer stands this far out of the noise
+	bendSigma   = 4.5  // and a drift this far
 )
 
 // resting follows a beat too slow for windows of seconds, down to standstill:
@@ -30,9 +31,10 @@ type resting struct {
 
 	start    float64 // sound before this belongs to another setting of the trimmer, s
 	held     bool
-	drifts   bool // the fit has a chirp
-	steadied bool // the phase was handed out a second ago
-	due      int  // seconds to the next search
+	proven   float64 // from when on what is held may be told: after it foretold a little, s
+	drifts   bool    // the fit has a chirp
+	steadied bool    // the phase was handed out a second ago
+	due      int     // seconds to the next search
 
 	known  bool // the offset, from the latest fit that stood by itself
 	off    complex128
@@ -45,7 +47,11 @@ type resting struct {
 }
 
 func newResting(cfg *Config, p *plan) *resting {
-	return &resting{cfg: cfg, ring: newRing(p), fit: circleFit{complex: cfg.Hookup == Quadrature}}
+	s := &resting{cfg: cfg, ring: newRing(p), fit: circleFit{complex: cfg.Hookup == Quadrature}}
+	const most = 2*fitPoints + 8
+	s.fit.z, s.fit.ok, s.fit.r = make([]complex128, 0, most), make([]bool, 0, most), make([]complex128, 0, most)
+	s.fit.tmp = make([]float64, 0, most)
+	return s
 }
 
 // step returns the block length, as a power of two of the ring's samples, for
@@ -178,7 +184,7 @@ func (s *resting) bent() bool {
 	i := s.fit.na - 1
 	var w [nPar]float64
 	w[pBend] = 1
-	return math.Abs(s.fit.sol[i]) > bendSigma*math.Sqrt(s.fit.variance(w))
+	return math.Abs(s.fit.sol[i]) > bendSigma*math.Sqrt(s.fit.variance(w)/s.fit.red) // red with the drift, if there is one
 }
 
 // learn keeps what a good fit tells of the input.
@@ -225,172 +231,8 @@ func (s *resting) swing() float64 {
 	return math.Sqrt(v)
 }
 
-// search looks for a slow beat in the sound since start: in all of it, else in
-// ever shorter pieces of its end, as the trimmer may have been turning.
-func (s *resting) search() {
-	all := min(s.ring.upto()-s.start, ringSpan)
-	if s.due--; s.due > 0 && all > 32 {
-		return // a little more sound says little more
-	}
-	s.due = int(min(all/32, 4))
-	if all < slowLeast {
-		s.seen, s.why = s.known, "listening for a slow beat"
-		return
-	}
-	s.drifts = false
-	said := false
-	for part := all; part >= slowLeast; part *= shorter {
-		if s.held = s.try(part); s.held {
-			s.start = s.ring.upto() - part
-			s.follow() // at full resolution, with all its doubts
-			return
-		}
-		// What can be said rests on the longest piece that one setting explains.
-		last, one := part*shorter < slowLeast, s.oneSetting()
-		if !said && (one || last) {
-			if s.explain(part); last && !one {
-				s.why = "what moves around 0 Hz is not one steady beat: let the trimmer rest"
-			}
-			said = true
-		}
-	}
-}
-
-// oneSetting reports whether the fit leaves nothing but noise.
-func (s *resting) oneSetting() bool {
-	late, _ := s.fit.change(s.fit.density(), false)
-	return s.fit.red == 1 && late < jumpSigma-1
-}
-
-// try fits a beat to the latest span seconds and reports whether it can be
-// defended.
-func (s *resting) try(span float64) bool {
-	end := s.ring.upto()
-	k := s.step(span, 0, scanMost)
-	c := &s.fit
-	c.x, c.prior = circle{}, false
-	if !c.load(s.ring, end-span, end, k) {
-		return false
-	}
-	by := 1 / (6 * span)
-	top := min(0.9*ringHalf, 0.35/c.dt)
-	lo := 2 * by
-	if c.complex {
-		lo = -by * math.Floor(top/by)
-	}
-	c.x.f = c.scan(lo, top, by)
-	if s.passes() {
-		return true
-	}
-	if !s.known || !c.complex {
-		return false
-	}
-	keep := *c
-	s.remember(circle{})
-	c.x.f = c.scan(lo, top, by)
-	if c.run(1) && s.recognised() && c.red == 1 && c.u(pTurn) < 0.02 {
-		return true
-	}
-	c.x, c.prior, c.s2, c.na, c.low, c.red = keep.x, false, keep.s2, keep.na, keep.low, keep.red
-	return false
-}
-
-// passes fits from x on and reports whether the result can be defended: there
-// is enough of the turn for level and offset to be told apart, and the rest is
-// noise, if need be with a drift of the beat.
-func (s *resting) passes() bool {
-	c := &s.fit
-	if !c.run(1) {
-		return false
-	}
-	least := 1.0
-	if c.complex {
-		least = leastTurn
-	}
-	if s.clean(least) {
-		return true
-	}
-	// A drift can make a beat of any smooth curve: it takes more turns.
-	x := c.x
-	if math.Abs(x.f)*c.span() > 2*least && c.uAmp() < 3*shakyAmp*cmplx.Abs(x.a) && c.run(2) && math.Abs(c.x.c)*c.half < 0.5*math.Abs(c.x.f) && s.clean(2.5*least) {
-		s.drifts = true
-		return true
-	}
-	if c.x != x {
-		c.x = x
-		c.run(1) // for what is said of it
-	}
-	return false
-}
-
-// clean reports whether the fit has turned at least so much, tells level and
-// offset apart, and leaves noise.
-func (s *resting) clean(least float64) bool {
-	c := &s.fit
-	a, turned := cmplx.Abs(c.x.a), math.Abs(c.x.f)*c.span()
-	if turned < least || c.span() < 0.9*slowLeast || math.Abs(c.x.f) > handOver || c.uAmp() > shakyAmp*a {
-		return false
-	}
-	if s.known && turned < 3 && !s.recognised() {
-		return false // the end of a turn of the trimmer can look like a small beat
-	}
-	if s.noise > 0 && c.density() > 4*s.noise {
-		return false // less than all of it is one setting of the trimmer
-	}
-	rms := math.Sqrt(c.rss / float64(c.n))
-	return c.red == 1 || turned > 3 && rms < 0.2*a
-}
-
-// explain says what is known while no number can be defended, and whether
-// there is anything at all. The fit of try is still there.
-func (s *resting) explain(span float64) {
-	c := &s.fit
-	level, still := c.level()
-	most := 1.2 / span // a faster one would have been told
-	// More than a sound card's own offset, which stays below -60 dBFS (common
-	// practice), must stand or move at 0 Hz.
-	s.seen = s.known || level > 1e-3
-	if !s.seen {
-		return
-	}
-	if math.Abs(c.x.f) > handOver {
-		s.why = "listening to a faster beat"
-		return
-	}
-	if c.complex {
-		s.why = s.explainTurn(span, still)
-		return
-	}
-	a, f := cmplx.Abs(c.x.a), math.Abs(c.x.f)
-	switch more := 1/f - span; {
-	case still:
-		s.why = fmt.Sprintf("no beat beyond ±%.2g Hz: slower, at rest, or none at all", most)
-	case c.red == 1 && f > 0.2/span && c.uAmp() < 3*shakyAmp*a && more > 0:
-		s.why = fmt.Sprintf("the level turns slowly: within ±%.2g Hz, about %.0f s more are needed", most, math.Ceil(more))
-	default:
-		s.why = fmt.Sprintf("the level moves: within ±%.2g Hz, a whole cycle is needed", most)
-	}
-}
-
-// explainTurn bounds the beat of quadrature by how far its point has moved,
-// which takes a guess of its circle: at least half of what stands at 0 Hz.
-func (s *resting) explainTurn(span float64, still bool) string {
-	c := &s.fit
-	at, v, uv := c.drift()
-	within := min((cmplx.Abs(v)+2*uv)/(math.Pi*max(cmplx.Abs(at), 1e-9)), 1/span) // a whole turn would have been seen
-	if still {
-		return fmt.Sprintf("at rest within ±%.2g Hz, if no more than half of what stands at 0 Hz is the input's offset; or no beat at all", within)
-	}
-	more := 0.0
-	if rel := c.uAmp() / cmplx.Abs(c.x.a); rel > shakyAmp && rel < 3 {
-		more = span * (math.Pow(rel/shakyAmp, 0.4) - 1)
-	}
-	more = max(more, leastTurn/math.Abs(c.x.f)-span)
-	if c.red > 1 || !(more > 0 && more < ringSpan) {
-		return fmt.Sprintf("it turns slowly: within ±%.2g Hz, more of a turn is needed to tell the beat from the input's offset", within)
-	}
-	return fmt.Sprintf("it turns slowly: within ±%.2g Hz, about %.0f s more are needed to tell the beat from the input's offset", within, math.Ceil(more))
-}
+// told reports whether there is a beat that may be told.
+func (s *resting) told() bool { return s.held && s.ring.upto() >= s.proven }
 
 // phaseAt returns the phase of the beat at time t near the end of the sound, in
 // turns, and whether it can be handed out. It is the phase of the fit, moved by
