@@ -60,7 +60,7 @@ type pulses struct {
 
 	eager  float64 // until this minute every one is listened to
 	misses int     // minutes since the pulses were heard
-	doubts int     // looks in a row that showed something else
+	doubts int     // looks in a row that showed no such pulse as was expected
 	locked bool
 }
 
@@ -494,8 +494,9 @@ func (p *pulses) judge() {
 	switch {
 	case off < 0.008 && best.good:
 		p.doubts, p.gateBand = 0, best.band
-	case off < 0.008 && best.z > 6:
-		if p.doubts++; p.doubts >= 3 { // no pulses after all
+	case p.locked && p.misses == 0 && !best.good && best.z > 6:
+		// Something comes when expected, but is not alone or not short.
+		if p.doubts++; p.doubts >= 6 {
 			p.locked, p.told, p.doubts = false, told{}, 0
 			p.spots, p.found = p.spots[:0], p.found[:0]
 		}

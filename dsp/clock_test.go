@@ -28,6 +28,7 @@ type ticking struct {
 	miss    bool    // no pulse in seconds 29 and 59, a long one in second 0
 	away    [2]float64
 	often   float64 // pulses a second; default 1
+	tenFrom float64 // from this second on they come ten times a second; 0: never
 	click   float64 // a wide-band click on every true second, amplitude
 }
 
@@ -60,6 +61,9 @@ func (s ticking) play(seconds float64, each func(x []float32, n int64)) {
 	}
 	often := max(1, s.often)
 	burst := func(t float64) complex128 { // the upper or lower sideband of the pulse
+		if s.tenFrom > 0 && t > s.tenFrom {
+			often = 10
+		}
 		sec := math.Floor(t * often)
 		in, minute := t-sec/often, math.Mod(sec, 60)
 		l := long
@@ -157,6 +161,7 @@ func truth(t *testing.T, c *clock, name string, e, most, u float64) {
 // ten minutes, on either side of the tone, through fading over two paths,
 // programme, gain control and drift, with pulses missing.
 func TestClockFromPulses(t *testing.T) {
+	t.Parallel()
 	scenes := []struct {
 		name string
 		ticking
@@ -184,6 +189,7 @@ func TestClockFromPulses(t *testing.T) {
 // Nothing that is not short pulses once a second is taken for them: no claim, and
 // no minute that passes for a find.
 func TestClockClaimsNoPulses(t *testing.T) {
+	t.Parallel()
 	seconds := 800.0
 	if long() {
 		seconds = 20000
@@ -257,6 +263,7 @@ func TestClockFindByChance(t *testing.T) {
 // place of the second, as after samples lost uncounted, go on with the same line;
 // counted gaps cost nothing.
 func TestClockPulsesInterrupted(t *testing.T) {
+	t.Parallel()
 	s := ticking{rate: 4000, e: 123e-6, tone: 600, beat: 4, pulse: 1000, cn0: 50, seed: 5, away: [2]float64{900, 1900}}
 	c := newClock(s.rate, false)
 	var lost int64
@@ -286,6 +293,22 @@ func TestClockPulsesInterrupted(t *testing.T) {
 	truth(t, c, "interrupted", s.e, 0.5e-6, 0.5e-6)
 }
 
+// A find is let go when what comes every second turns out to come oftener, and
+// what it said with it.
+func TestClockLetsGo(t *testing.T) {
+	t.Parallel()
+	s := ticking{rate: 4000, e: 40e-6, tone: 600, beat: 4, pulse: 1000, cn0: 50, seed: 6, tenFrom: 700}
+	c := newClock(s.rate, false)
+	s.hear(c, 7500, func() {
+		if _, _, _, ok := c.estimate(); !ok || !c.pulses.locked {
+			t.Error("not found")
+		}
+	})
+	if _, _, _, ok := c.estimate(); ok || c.pulses.locked {
+		t.Error("still claimed")
+	}
+}
+
 // arrivals marks the samples of a clock that is off by e, as a host would see
 // them: late by up to 30 ms, now and then by much more.
 func arrivals(c *clock, e, seconds float64, seed uint64, clockShows func(t float64) float64) {
@@ -311,6 +334,7 @@ func arrivals(c *clock, e, seconds float64, seed uint64, clockShows func(t float
 }
 
 func TestClockFromHost(t *testing.T) {
+	t.Parallel()
 	seeds := uint64(3)
 	if long() {
 		seeds = 200
