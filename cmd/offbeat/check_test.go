@@ -135,7 +135,7 @@ func TestSimulate(t *testing.T) {
 	for _, c := range []struct{ args, want string }{
 		{"", "where to?"},
 		{"a.wav b.wav", "where to?"},
-		{"--fading stormy a.wav", `--fading: "stormy": must be steady, quiet, moderate or disturbed`},
+		{"--fading stormy a.wav", `--fading: "stormy": must be steady, quiet, moderate, disturbed, custom or rice:K`},
 		{"--duration 5 a.wav", `--duration: "5": a length of time is a number with s, min, h or d`},
 		{"--duration 0s a.wav", "duration"},
 		{"--bits 8 a.wav", `--bits: "8": must be 16, 24 or 32`},

@@ -32,6 +32,8 @@ What is heard:
   --demo                begin with the demonstration: fading, a programme on the
                         carrier, a drifting receiver, an ageing local
   --hookup two-tone|mixer|quadrature   --sideband usb|lsb
+  --baseband true|false quadrature: a receiver's baseband with both tones, not
+                        the beat itself (default false)
   --carrier FREQ        nominal carrier (default 10MHz)
   --local FREQ          where the local should be heard (default: the carrier)
   --tone HZ             audio pitch of the carrier (default 1000)
@@ -39,20 +41,47 @@ What is heard:
   --drift-per-day FRACTION
                         ageing of the local: 2ppb
   --white-fm, --flicker-fm, --walk-fm NUMBER
-                        noise of the local: Allan deviation at 1 s; floor; at 1 s
+                        noise of the local: Allan deviation at 1 s; its floor;
+                        at 1 s
   --carrier-level DB, --local-level DB
                         in dB of full scale (default -20 and -18)
   --carrier-cn0 DB      carrier over the noise in 1 Hz (default 55)
 
-The path and the receiver:
-  --fading steady|quiet|moderate|disturbed
-                        after ITU-R F.1487 (default steady)
-  --rice-k NUMBER       power of a steady part over that of the fading parts
+The path:
+  --fading steady|quiet|moderate|disturbed|rice:K|custom
+                        quiet, moderate and disturbed after ITU-R F.1487;
+                        rice:4 is quiet with a steady part of 4 times the power
+                        of the fading parts (default steady)
+  --spread HZ, --path-delay TIME, --path-shift HZ
+                        of custom, and of rice:K: rms Doppler width of each
+                        path; delay (2ms) and mean Doppler of the second path
+  --rice-k NUMBER       a steady part in any fading: its power over theirs
   --pulses, --tones, --subcarrier, --speech true|false
                         the programme on the carrier; --depth 0..1 scales it
+
+The receiver:
   --receiver-drift HZ   a minute
-  --agc true|false      gain control
+  --receiver-wander HZ  rms of its coming and going over hours
+  --passband LOW-HIGH   of its audio, in Hz (default 300-2700); none: noise in
+                        all of the band
+  --agc true|false      gain control; --agc-attack TIME, --agc-decay TIME
+                        (default 5ms and 500ms)
+  --spur HZ:DB          a tone of its own, or hum: 150Hz:-40dB
+  --dc NUMBER           offset of the input, full scale 1
   --clock-error PPM     of the sample clock
+
+What happens when, each in true time from the start:
+  --trim TIME:HZ        the local is turned by so much at that time;
+         TIME:HZ/TIME   evenly within the second time: 20s:-4Hz/30s turns it
+                        by -4 Hz from 20 s to 50 s
+  --retune TIME:HZ      the receiver's dial: both tones jump by so much
+  --carrier-away TIME-TIME, --local-away TIME-TIME
+                        not heard from the first time to the second: 60s-90s
+  These and --spur may be given more than once, or take several with commas
+  between: --trim 20s:-4Hz/30s,60s:+0.5Hz
+
+Frequencies take mHz, Hz, kHz or MHz. Times take s, min, h or d; a path's delay
+and the gain control's times take ms or s.
 `,
 }
 
@@ -75,7 +104,12 @@ func simulate(ctx context.Context, c *command, args []string, std stdio) error {
 			if err := set(&probe, v); err != nil {
 				return err
 			}
-			said = append(said, func(s *simSpec) error { return set(s, v) })
+			said = append(said, func(s *simSpec) error {
+				if err := set(s, v); err != nil {
+					return fmt.Errorf("--%s: %w", name, err)
+				}
+				return nil
+			})
 			return nil
 		})
 	}
@@ -86,8 +120,9 @@ func simulate(ctx context.Context, c *command, args []string, std stdio) error {
 	}
 	define("hookup", into(func(s *simSpec) *dsp.Hookup { return &s.Hookup }, parseHookup))
 	define("sideband", into(func(s *simSpec) *dsp.Sideband { return &s.Sideband }, parseSideband))
-	define("carrier", into(func(s *simSpec) *float64 { return &s.Carrier }, parseHertz))
-	define("local", into(func(s *simSpec) *float64 { return &s.Local }, parseHertz))
+	define("baseband", into(func(s *simSpec) *bool { return &s.Baseband }, parseBool))
+	define("carrier", into(func(s *simSpec) *float64 { return &s.Carrier }, notZero(parseHertz)))
+	define("local", into(func(s *simSpec) *float64 { return &s.Local }, notZero(parseHertz)))
 	define("duration", into(func(s *simSpec) *float64 { return &s.Duration }, parseSeconds))
 	files, err := f.parse(args)
 	if err != nil {
@@ -105,6 +140,9 @@ func simulate(ctx context.Context, c *command, args []string, std stdio) error {
 			return err
 		}
 	}
+	if err := plain.check(); err != nil {
+		return err
+	}
 	ctx, cancel := interruptible(ctx)
 	defer cancel()
 	truth := files[0] + ".truth.jsonl"
@@ -117,9 +155,6 @@ func simulate(ctx context.Context, c *command, args []string, std stdio) error {
 
 // writeScene writes both files, or leaves neither behind.
 func writeScene(ctx context.Context, wav, truth string, scene sim.Config, opt sim.WriteOptions, force bool) (err error) {
-	if _, err := sim.New(scene); err != nil {
-		return err
-	}
 	var made []*os.File
 	defer func() {
 		for _, f := range made {
