@@ -53,8 +53,9 @@ func listed[T any](field func(*simSpec) *string, kind itemKind[T]) func(*simSpec
 // list reads items with commas between.
 func (k itemKind[T]) list(text string) (items []T, err error) {
 	for item := range strings.SplitSeq(text, ",") {
-		v, err := k.read(strings.TrimSpace(item))
-		if err == errShape {
+		item = strings.TrimSpace(item)
+		v, err := k.read(item)
+		if err == errShape || err != nil && !itemLike(item) {
 			return nil, fmt.Errorf("%s: must be %s", quoted(item), k.shape)
 		}
 		if err != nil {
@@ -63,6 +64,15 @@ func (k itemKind[T]) list(text string) (items []T, err error) {
 		items = append(items, v)
 	}
 	return items, nil
+}
+
+// itemLike tells a mistake in an item, where it helps to say which part is wrong,
+// from what is nothing like one.
+func itemLike(s string) bool {
+	odd := func(r rune) bool {
+		return !(r >= '0' && r <= '9' || r >= 'a' && r <= 'z' || r >= 'A' && r <= 'Z' || strings.ContainsRune("+-.:/ µ", r))
+	}
+	return len(s) <= 80 && strings.IndexFunc(s, odd) < 0
 }
 
 // text writes items so that list reads the same ones.
@@ -106,9 +116,9 @@ func readTrim(s string) (u sim.Turn, err error) {
 }
 
 func writeTrim(u sim.Turn) string {
-	s := plainNumber(u.At) + "s:" + plainNumber(u.By) + "Hz"
+	s := exactly(u.At) + "s:" + exactly(u.By) + "Hz"
 	if u.Over != 0 {
-		s += "/" + plainNumber(u.Over) + "s"
+		s += "/" + exactly(u.Over) + "s"
 	}
 	return s
 }
@@ -125,7 +135,7 @@ func readRetune(s string) (r sim.Step, err error) {
 	return r, err
 }
 
-func writeRetune(r sim.Step) string { return plainNumber(r.At) + "s:" + plainNumber(r.By) + "Hz" }
+func writeRetune(r sim.Step) string { return exactly(r.At) + "s:" + exactly(r.By) + "Hz" }
 
 func readAway(s string) (a [2]float64, err error) {
 	// The dash of an exponent, 1e-3s, is not the one between; a time's own
@@ -151,7 +161,7 @@ func readAway(s string) (a [2]float64, err error) {
 	return a, nil
 }
 
-func writeAway(a [2]float64) string { return plainNumber(a[0]) + "s-" + plainNumber(a[1]) + "s" }
+func writeAway(a [2]float64) string { return exactly(a[0]) + "s-" + exactly(a[1]) + "s" }
 
 func readSpur(s string) (p sim.Spur, err error) {
 	hz, level, ok := strings.Cut(s, ":")
@@ -165,7 +175,7 @@ func readSpur(s string) (p sim.Spur, err error) {
 	return p, err
 }
 
-func writeSpur(p sim.Spur) string { return plainNumber(p.Hz) + "Hz:" + plainNumber(p.DBFS) + "dB" }
+func writeSpur(p sim.Spur) string { return exactly(p.Hz) + "Hz:" + exactly(p.DBFS) + "dB" }
 
-// plainNumber writes v in full, without an exponent.
-func plainNumber(v float64) string { return strconv.FormatFloat(v, 'f', -1, 64) }
+// exactly writes v so that it reads as the same number.
+func exactly(v float64) string { return strconv.FormatFloat(v, 'g', -1, 64) }

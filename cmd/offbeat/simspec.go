@@ -244,7 +244,7 @@ func setFading(s *simSpec, text string) error {
 		if err != nil || v < 0 {
 			return fmt.Errorf("%s: must be rice: and a number from 0, such as rice:4", quoted(text))
 		}
-		s.Fading, s.RiceK = "rice:"+plainNumber(math.Abs(v)), 0
+		s.Fading, s.RiceK = "rice:"+exactly(math.Abs(v)), 0
 		return nil
 	}
 	if !slices.Contains(fadings, text) {
