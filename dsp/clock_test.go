@@ -174,7 +174,7 @@ func TestClockFromPulses(t *testing.T) {
 	}
 	seeds, span := uint64(1), 1500.0
 	if long() {
-		seeds, span = 10, 7200
+		seeds, span = 4, 7200
 	}
 	for _, s := range scenes {
 		for seed := range seeds {
@@ -337,7 +337,7 @@ func TestClockFromHost(t *testing.T) {
 	t.Parallel()
 	seeds := uint64(3)
 	if long() {
-		seeds = 200
+		seeds = 60
 	}
 	for _, x := range []struct {
 		name  string
