@@ -143,7 +143,8 @@ func runSlow(t testing.TB, s *slowScene, cfg Config) ([]Reading, Summary) {
 // Slow beats reach the bound of the model that is fitted (rms of error over
 // bound at most 1.3), the truth lies within 2u in 90 to 98 %, and the sign is
 // never wrong: of quadrature from +-1 mHz, also in a third of a turn, of a mixer
-// never stated. The summary is held to it where its phases have several cycles.
+// never stated. The summary is held to it where most of the sound is left once
+// the phase can be told: it regresses the phases of single seconds.
 func TestSlowFigures(t *testing.T) {
 	seed, scenes := uint64(20), 20
 	if long() {
@@ -156,9 +157,9 @@ func TestSlowFigures(t *testing.T) {
 		summary bool
 	}{
 		{Quadrature, 1, 1, 5, false}, {Quadrature, 1, 1, 30, false}, {Quadrature, 3, 3, 5, false}, {Quadrature, 10, 10, 5, false},
-		{Quadrature, 30, 30, 5, false}, {Quadrature, 30, 30, 30, true}, {Quadrature, 30, 375, 5, true},
+		{Quadrature, 30, 30, 5, false}, {Quadrature, 30, 30, 30, true}, {Quadrature, 30, 375, 5, false},
 		{Mixer, 1, 1, 20, false}, {Mixer, 1, 1, 30, false}, {Mixer, 3, 3, 10, false}, {Mixer, 10, 10, 5, false},
-		{Mixer, 30, 30, 5, false}, {Mixer, 30, 30, 30, true}, {Mixer, 30, 375, 5, true},
+		{Mixer, 30, 30, 5, false}, {Mixer, 30, 30, 30, true}, {Mixer, 30, 375, 5, false},
 	} {
 		t.Run(fmt.Sprintf("%s %g-%g mHz, %g min", c.hookup, c.lo, c.hi, c.minutes), func(t *testing.T) {
 			t.Parallel()
@@ -180,9 +181,7 @@ func TestSlowFigures(t *testing.T) {
 				}
 				slowFigures(t, s, &last, &all)
 			}
-			t.Logf("seed %d, %d scenes, limit 1.30", seed, scenes)
-			t.Logf("last reading: %v", &last)
-			t.Logf("summary:      %v", &all)
+			t.Logf("%s %g-%g mHz, %g min: seed %d, %d scenes, limit 1.30\nlast reading: %v\nsummary:      %v", c.hookup, c.lo, c.hi, c.minutes, seed, scenes, &last, &all)
 			// Few scenes scatter: three standard deviations of an rms and of a share.
 			n := math.Sqrt(float64(scenes))
 			bad := func(f *figures) bool {
