@@ -102,7 +102,7 @@ func (s *smear) moments(w *window, centre, reach, n0 float64) moments {
 		return m
 	}
 	mean := p1 / p0
-	if back := s.back(w, n0) / step; back > 0 && math.Abs(centre) < reach {
+	if back := s.back() / step; back > 0 && math.Abs(centre) < reach {
 		p1 += back * at0
 		p0 += back
 		mean = p1 / p0
@@ -115,23 +115,13 @@ func (s *smear) moments(w *window, centre, reach, n0 float64) moments {
 }
 
 // back returns the power that the local's fit has taken from the carrier's
-// smear at the local's own frequency, by the density beside it.
-func (s *smear) back(w *window, n0 float64) float64 {
-	if s.lever == 0 {
+// smear at the local's own frequency, by the density of a Gaussian smear there.
+func (s *smear) back() float64 {
+	if s.lever == 0 || !(s.sigma > 0) {
 		return 0
 	}
-	norm := 0.0
-	for i := range w.w {
-		norm += w.w[i]
-	}
-	norm *= w.dt
-	sum, n := 0.0, 0.0
-	for _, f := range [4]float64{-1.6, -0.9, 0.9, 1.6} {
-		y := s.at(w, f)
-		sum += (real(y)*real(y) + imag(y)*imag(y)) * w.dt * w.dt / norm
-		n++
-	}
-	return max(0, sum/n-n0) * s.lever
+	d := s.mean / s.sigma
+	return s.slowly / (math.Sqrt(2*math.Pi) * s.sigma) * math.Exp(-d*d/2) * s.lever
 }
 
 // at returns the Fourier sum of s.dft under the square root of the weights: so

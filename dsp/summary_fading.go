@@ -28,8 +28,17 @@ func (s *Summer) byPower() (mean, u float64, ok bool) {
 	for i := range g {
 		g[i] = s.wf[i] - mean*s.w[i]
 	}
-	k := int(max(6, min(24, 0.05*float64(len(g)))))
-	return mean, math.Sqrt(density0(g, 1, k)*float64(len(g))) / w, true
+	// The fading's own width says how far the density is flat, and by itself what
+	// the mean of a Gaussian spectrum is worth: few tapers are scattered, a
+	// formula is blind, so both are heard.
+	span := float64(len(g) * s.tau0)
+	width := s.spread / max(1, float64(s.spreadN))
+	k := int(max(6, min(float64(len(g))/4, 0.6*width*span)))
+	v := density0(g, 1, k) * float64(len(g)) / (w * w)
+	seen := span * n / float64(len(g))
+	known := width / (4 * math.Sqrt(math.Pi) * seen)
+	const weight = 12
+	return mean, 1.1 * math.Sqrt((2*float64(k)*v+weight*max(known, v/4))/(2*float64(k)+weight)), true
 }
 
 // density0 returns the density of g around frequency zero, per sample, as the

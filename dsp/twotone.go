@@ -116,7 +116,7 @@ func (e *twoTone) second(i int64) Reading {
 	}
 	e.identify(mid)
 	switch {
-	case e.local < 0:
+	case e.local < 0 || e.merged || e.sm.slowly == 0 && e.held() == 1:
 		e.keepSlow()
 		e.spot(mid)
 	case !spread:

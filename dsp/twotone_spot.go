@@ -14,7 +14,7 @@ const (
 // spreads its power. Where that is plain, it settles which is which, also where
 // the carrier is too wide to be followed as a line.
 func (e *twoTone) spot(mid float64) bool {
-	if e.merged || len(e.bands) != 1 || math.Abs(e.cfg.SetOff()) >= 10 || e.cfg.Wired {
+	if len(e.bands) != 1 || math.Abs(e.cfg.SetOff()) >= 10 || e.cfg.Wired {
 		return false
 	}
 	b, st := e.bands[0], &e.pair.st
@@ -95,7 +95,8 @@ func (e *twoTone) floor(b *band, f float64) float64 {
 
 // settle takes the line for the local and what lies beside it for the carrier.
 func (e *twoTone) settle(b *band, mid, line, carrier, amp, power, width, n0 float64) {
-	e.local = 1
+	e.local, e.merged, e.jumped = 1, false, true
+	e.count.broken()
 	g := b.gain(line - b.centre)
 	c, l := &e.tr[0], &e.tr[1]
 	*c = track{live: true, band: b, f: carrier, at: mid, amp: math.Sqrt(power) / g, noise: n0 / (g * g), tail: true}

@@ -102,7 +102,9 @@ func (e *twoTone) lookBeside(c *track, mid float64) {
 	}
 	g := b.gain(e.sm.loc.f + want - b.centre)
 	a2 := e.sm.loc.amp * e.sm.loc.amp
-	e.sm.sigma = e.sm.width(n0 / (g * g) * phasorRate / a2)
+	if w := e.sm.width(n0 / (g * g) * phasorRate / a2); !math.IsNaN(w) {
+		e.sm.sigma = w
+	}
 	if e.sm.n%(5*phasorRate) == 0 {
 		e.sm.steady = e.sm.inOneLine(n0 / (g * g) * phasorRate / a2)
 	}

@@ -79,7 +79,7 @@ func fadingRows() []row {
 
 // judgeMean compares the run's mean with the middle of the spectrum received.
 func judgeMean(all []played, sigma, long float64, lop bool) []figure {
-	var e, realised errs
+	var e, realised, path, missing, measured errs
 	wrong, usable := 0, 0
 	width := sigma
 	limit := spreadLimit(sigma, long)
@@ -96,6 +96,17 @@ func judgeMean(all []played, sigma, long float64, lop bool) []figure {
 		}
 		e.add(float64(p.summary.Beat)-(p.sim.Offset-p.note), float64(p.summary.BeatU))
 		realised.add(float64(p.summary.Beat)-pf/pw, float64(p.summary.BeatU))
+		path.add(pf/pw-(p.sim.Offset-p.note), 1)
+		var hw, hf float64
+		for k, r := range p.readings {
+			if t := p.truthAt(k); !math.IsNaN(r.Beat) {
+				w := math.Pow(10, t.CarrierDBFS/10)
+				hw += w
+				hf += w * t.Received
+			}
+		}
+		missing.add(hf/hw-pf/pw, 1)
+		measured.add(float64(p.summary.Beat)-hf/hw, 1)
 		for _, r := range p.readings {
 			if !math.IsNaN(r.Beat) {
 				usable++
@@ -110,6 +121,9 @@ func judgeMean(all []played, sigma, long float64, lop bool) []figure {
 		least("means given", percent(e.n(), n), 100, "%"),
 		most("rms error / limit of the spread", e.rms()/limit, 1.1, ""),
 		told("limit of the spread", limit*1e3, "mHz"),
+		told("rms of the realised mean itself / limit", path.rms()/limit, ""),
+		told("rms by seconds that are missing / limit", missing.rms()/limit, ""),
+		told("rms by readings that are off / limit", measured.rms()/limit, ""),
 		told("rms error about the realised mean / limit", realised.rms()/limit, ""),
 		least("truth within 2u", e.within(2), 92, "%"),
 		most("truth within 2u", e.within(2), 98, "%"),

@@ -103,7 +103,9 @@ func closeRows() []row {
 		add(fmt.Sprintf("close %g Hz, steady", sep), []float64{sep}, true, level)
 	}
 	agc := func(s *scene) { s.sim.AGC = true }
-	programme := func(s *scene) { s.sim.SecondPulses, s.sim.Tones, s.sim.Subcarrier, s.sim.Speech = true, true, true, true }
+	programme := func(s *scene) {
+		s.sim.SecondPulses, s.sim.Tones, s.sim.Subcarrier, s.sim.Speech = true, true, true, true
+	}
 	drift := func(r *rand.Rand, s *scene) { s.sim.ReceiverDrift = 0.3 * either(r) }
 	rice := func(s *scene) { s.fade(0.1, 0); s.sim.RiceK = 4 }
 	add("close, gain control", seps, false, func(r *rand.Rand, s *scene) { level(r, s); agc(s) })

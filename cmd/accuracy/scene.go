@@ -171,8 +171,8 @@ func (w *row) worst(all []played, out io.Writer) {
 		fmt.Fprintf(out, "  worse %.4g: %+v local tone %g\n     summary %.5f u %.5f %s\n", w.worse(&p), p.sim, p.cfg.LocalTone, p.summary.Beat, p.summary.BeatU, p.summary.Method)
 		for i, r := range p.readings {
 			t := p.truthAt(i)
-			fmt.Fprintf(out, "     %6.1f %-9s %9.5f u %8.2g span %5.1f truth %9.5f recv %9.5f C %8.3f L %8.3f (%8.3f %8.3f) run %d sp %.3f %v %s\n", r.T, r.State, r.Beat, r.BeatU, r.Span, t.Beat, t.Received,
-				r.CarrierTone, r.LocalTone, t.CarrierTone, t.LocalTone, r.PhaseRun, r.SpreadHz, r.Flags, r.Why)
+			fmt.Fprintf(out, "     %6.1f %-9s %9.5f u %8.2g span %5.1f truth %9.5f recv %9.5f C %8.3f L %8.3f (%8.3f %8.3f) lev %6.2f %6.2f run %d sp %.3f %v %s\n", r.T, r.State, r.Beat, r.BeatU, r.Span, t.Beat, t.Received,
+				r.CarrierTone, r.LocalTone, t.CarrierTone, t.LocalTone, r.CarrierDBFS-r.LocalDBFS, t.CarrierDBFS-t.LocalDBFS, r.PhaseRun, r.SpreadHz, r.Flags, r.Why)
 		}
 	}
 }
