@@ -69,6 +69,7 @@ type Summer struct {
 	beat    []float64 // Hz; signed if signed, else its size
 	u       []float64
 	run     []int32
+	span    []float64 // seconds of sound that the point's reading rests on
 	level   []float64 // of the carrier by the local, amplitude; 0 where there is no beat
 	w, wf   []float64 // power and power times beat, summed over the point's seconds
 	wide    int       // seconds in which the carrier was smeared by Doppler
@@ -118,6 +119,7 @@ func (s *Summer) Add(r Reading) {
 			s.beat = append(s.beat, beat)
 			s.u = append(s.u, r.BeatU)
 			s.run = append(s.run, int32(r.PhaseRun))
+			s.span = append(s.span, r.Span)
 			s.level = append(s.level, level)
 			s.w, s.wf = append(s.w, 0), append(s.wf, 0)
 		}
@@ -147,11 +149,12 @@ func (s *Summer) weigh(r *Reading, beat float64) float64 {
 func (s *Summer) halve() {
 	for i := range summaryPoints / 2 {
 		s.phase[i], s.beat[i], s.u[i], s.run[i], s.level[i] = s.phase[2*i], s.beat[2*i], s.u[2*i], s.run[2*i], s.level[2*i]
+		s.span[i] = s.span[2*i]
 		s.w[i], s.wf[i] = s.w[2*i]+s.w[2*i+1], s.wf[2*i]+s.wf[2*i+1]
 	}
 	n := summaryPoints / 2
 	s.phase, s.beat, s.u, s.run, s.level = s.phase[:n], s.beat[:n], s.u[:n], s.run[:n], s.level[:n]
-	s.w, s.wf = s.w[:n], s.wf[:n]
+	s.w, s.wf, s.span = s.w[:n], s.wf[:n], s.span[:n]
 	s.tau0 *= 2
 }
 
@@ -248,6 +251,14 @@ func (s *Summer) mean() (mean, u float64, method string) {
 	// In short runs wandering cannot show in the residuals: there the phases must
 	// also be as quiet as the readings' own uncertainty says.
 	trusted := white < 4*s.phaseU() || points > 30*s.runs()
+	// One slow tone: a reading near the end rests on nearly all of the sound, with
+	// level and offset fitted beside the beat. That beats phases told one by one,
+	// unless the run is many spans long.
+	if s.cfg.Hookup != TwoTone && s.cfg.LocalTone == 0 {
+		if m, wu, method := s.weighted(); wu < max(resid, white)/math.Sqrt(sxx)*scale {
+			return m, wu, method
+		}
+	}
 	if points >= 3 && (n1 < 8 || resid < 1.6*white && trusted) && s.wide < s.usable/2 {
 		su := max(resid, s.phaseU(), white) / math.Sqrt(sxx)
 		return slope * scale, su * scale, "phase regression over unbroken runs"
@@ -387,7 +398,7 @@ func (s *Summer) phaseU() float64 {
 	sum, n := 0.0, 0.0
 	for i, u := range s.u {
 		if !math.IsNaN(u) && !math.IsNaN(s.phase[i]) {
-			sum += u * u
+			sum += u * u * math.Pow(max(1, s.span[i]), 3) // of one second's phase
 			n++
 		}
 	}
@@ -397,32 +408,35 @@ func (s *Summer) phaseU() float64 {
 	return math.Sqrt(sum/n) / math.Sqrt(12)
 }
 
-// weighted is the mean of scattered readings without continuous phase.
+// weighted is the mean of single readings whose spans do not overlap, taken
+// from the end backwards: the latest rest on the longest spans.
 func (s *Summer) weighted() (mean, u float64, method string) {
-	var w, wx, n float64
-	for i, b := range s.beat {
-		if !math.IsNaN(b) && s.u[i] > 0 {
-			k := 1 / (s.u[i] * s.u[i])
-			w += k
-			wx += k * b
-			n++
+	var w, wx, n, chi float64
+	upto := math.Inf(1)
+	for i := len(s.beat) - 1; i >= 0; i-- {
+		t := float64(i * s.tau0)
+		if math.IsNaN(s.beat[i]) || !(s.u[i] > 0) || t > upto {
+			continue
+		}
+		upto = t - max(s.span[i], float64(s.tau0))*0.999
+		k := 1 / (s.u[i] * s.u[i])
+		w += k
+		wx += k * s.beat[i]
+		n++
+		// The spread about the mean so far, term by term (Welford; West 1979).
+		if w > k {
+			d := s.beat[i] - (wx-k*s.beat[i])/(w-k)
+			chi += d * d * k * (w - k) / w
 		}
 	}
 	if w == 0 {
 		return math.NaN(), math.NaN(), "no reading with an uncertainty"
 	}
-	mean = wx / w
-	chi := 0.0
-	for i, b := range s.beat {
-		if !math.IsNaN(b) && s.u[i] > 0 {
-			chi += (b - mean) * (b - mean) / (s.u[i] * s.u[i])
-		}
-	}
 	u = math.Sqrt(1 / w)
 	if n > 1 {
 		u *= math.Sqrt(max(1, chi/(n-1)))
 	}
-	return mean, u, "weighted mean of single readings"
+	return wx / w, u, "weighted mean of readings whose spans do not overlap"
 }
 
 // stability returns the overlapping Allan deviation of the offset at every
