@@ -41,6 +41,12 @@ func (s *smear) look(l *lens, b *band, mid, want, n0 float64) {
 	s.beat, s.u, s.power, s.powerU = m.mean, m.u, m.power, m.powerU
 	s.phase = cphase(s.at(w, m.mean)) // at the middle, of the second as a whole
 	s.note(w, mid)
+	if s.partial(n0 * phasorRate / (s.loc.amp * s.loc.amp)) {
+		s.beat, s.power = math.NaN(), 0
+		for k := range int64(phasorRate) {
+			s.ring[(s.n-1-k)%int64(len(s.ring))] = 0
+		}
+	}
 }
 
 // frame leaves in s.dft the window without the local's line, in the local's
@@ -169,6 +175,23 @@ func (s *smear) note(w *window, mid float64) {
 			s.ring[i] = y / complex(float64(n)*s.loc.amp, 0)
 		}
 	}
+}
+
+// partial reports whether the carrier was there in a part of the second only:
+// its first or last tenths hold nothing but noise while the rest is strong.
+func (s *smear) partial(noise float64) bool {
+	var p [phasorRate]float64
+	sum := 0.0
+	for k := range p {
+		v := s.back1(k)
+		p[k] = real(v)*real(v) + imag(v)*imag(v)
+		sum += p[k] / phasorRate
+	}
+	if sum < 15*noise {
+		return false
+	}
+	weak := func(v float64) bool { return v < 4*noise && v < 0.1*sum }
+	return weak(p[0]) && weak(p[1]) || weak(p[phasorRate-1]) && weak(p[phasorRate-2])
 }
 
 // turnRing changes the frequency by which the ring is turned back.

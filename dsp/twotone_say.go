@@ -166,6 +166,9 @@ func (e *twoTone) sayBoth(r *Reading, mid, scale float64) {
 		e.sayTone(b, &r.LocalTone, &r.LocalDBFS, &r.LocalCN0, scale)
 		r.Why = ""
 		why, proven := a.ev.carrierLike(&b.ev)
+		if !proven && e.sm.sigma >= 2*spreadLeast {
+			why, proven = "its tone is smeared by Doppler, the other stands still", true
+		}
 		if proven {
 			r.Why = "the carrier: " + why
 		} else if !e.cfg.Wired {
