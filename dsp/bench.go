@@ -137,13 +137,16 @@ const (
 // concurrent use. After the first seconds Samples allocates nothing while both
 // tones are held.
 type Bench struct {
-	cfg   Config
+	cfg   Config // its SampleRateError is the one in use
+	given Config // as New was told, with the defaults filled in
 	eng   engine
 	raw   raw
-	n     int64 // samples on the time line so far
-	slot  int64 // number of the tenth of a second that is being filled
-	sec   int64 // next second to be read
-	reach int64 // what the filters look ahead, samples
+	clock *clock
+	tones [2]float64 // where carrier and local were heard last, Hz by the nominal clock
+	n     int64      // samples on the time line so far
+	slot  int64      // number of the tenth of a second that is being filled
+	sec   int64      // next second to be read
+	reach int64      // what the filters look ahead, samples
 
 	glim Glimpse
 	acc  [4]secondLevel // of the latest seconds, by number modulo 4
@@ -165,20 +168,22 @@ func New(cfg Config) (*Bench, error) {
 		return nil, err
 	}
 	p := newPlan(cfg.Rate)
-	b := &Bench{cfg: cfg, reach: int64(p.reach())}
+	b := &Bench{cfg: cfg, given: cfg, reach: int64(p.reach()), tones: [2]float64{math.NaN(), math.NaN()}}
 	b.raw.keep = int(2.6*cfg.Rate) + 2*p.reach() + 64
 	b.raw.complex = cfg.Hookup == Quadrature
 	switch {
 	case cfg.Hookup == TwoTone, cfg.Hookup == Quadrature && cfg.LocalTone != 0:
 		b.eng = newTwoTone(&b.cfg, p, &b.raw)
+		b.clock = newClock(cfg.Rate, cfg.Hookup == Quadrature)
 	default:
 		b.eng = newSingle(&b.cfg, p, &b.raw)
+		b.clock = &clock{rate: cfg.Rate} // no tone beside which second pulses could stand
 	}
 	return b, nil
 }
 
 // Config returns the configuration with its defaults filled in.
-func (b *Bench) Config() Config { return b.cfg }
+func (b *Bench) Config() Config { return b.given }
 
 // slotEnd returns the sample at which tenth of a second j ends.
 func (b *Bench) slotEnd(j int64) int64 {
@@ -202,10 +207,12 @@ func (b *Bench) Samples(ch [][]float32) {
 			measure(l, q[:n])
 			b.raw.push(b.n, x[:n], q[:n])
 			b.eng.push(x[:n], q[:n])
+			b.clock.push(x[:n], q[:n])
 			q = q[n:]
 		} else {
 			b.raw.push(b.n, x[:n], nil)
 			b.eng.push(x[:n], nil)
+			b.clock.push(x[:n], nil)
 		}
 		x = x[n:]
 		b.n += int64(n)
@@ -268,6 +275,7 @@ func (b *Bench) Gap(n int64) {
 		return
 	}
 	b.eng.gap(b.n + n)
+	b.clock.gap(b.n + n)
 	b.raw.drop()
 	for n > 0 {
 		m := min(n, b.slotEnd(b.slot)-b.n)
@@ -310,6 +318,7 @@ func (b *Bench) read() {
 	}
 	sec := b.sec
 	b.sec++
+	clock := b.readClock()
 	lost := l.lost > 0 || b.levelOfIf(sec-1).lost > 0 && b.rawFrom(sec)
 	switch {
 	case l.samples == 0 || rms < silence:
@@ -335,6 +344,8 @@ func (b *Bench) read() {
 	if l.lost > 0 {
 		r.flag(Gap)
 	}
+	clock.say(&r, &b.given)
+	b.tellTones(&r)
 	if b.cfg.OnReading != nil {
 		b.cfg.OnReading(r)
 	}

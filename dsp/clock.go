@@ -20,9 +20,13 @@ import (
 // told and the greatest block has been seen.
 type clock struct {
 	rate   float64
-	n      int64 // samples on the time line so far
-	pulses *pulses
+	n      int64   // samples on the time line so far
+	pulses *pulses // nil: not looked for
 	host   host
+
+	words    string // of the estimate, made anew when the sources say something new
+	wordsFor [2]told
+	apart    bool // the sources contradict each other
 }
 
 const (
@@ -41,21 +45,29 @@ func newClock(rate float64, isComplex bool) *clock {
 
 // push takes the next samples; q is nil for real input.
 func (c *clock) push(x, q []float32) {
-	c.pulses.push(c.n, x, q)
+	if c.pulses != nil {
+		c.pulses.push(c.n, x, q)
+	}
 	c.n += int64(len(x))
 }
 
 // gap says that samples are missing; the next one has number next.
 func (c *clock) gap(next int64) {
 	c.n = next
-	c.pulses.gap(next)
+	if c.pulses != nil {
+		c.pulses.gap(next)
+	}
 }
 
 // tones tells where the steady tones are now, Hz of audio, carrier and local
 // first: pulses are looked for 1000 to 1500 Hz to either side of these two, and
 // nowhere near any. For the output of an AM detector or a mixer, tell 0. An empty
 // list leaves what was told before.
-func (c *clock) tones(hz ...float64) { c.pulses.aim(hz) }
+func (c *clock) tones(hz ...float64) {
+	if c.pulses != nil {
+		c.pulses.aim(hz)
+	}
+}
 
 // mark says that the host's clock showed at when sample n had just arrived.
 // Arrival may be late by anything, never early.
@@ -72,29 +84,55 @@ func (c *clock) mark(n int64, at time.Time) { c.host.mark(float64(n)/c.rate, at)
 // (a quantity known to be one of two values, GUM 4.3.7 in kind): both lie within u.
 func (c *clock) estimate() (e, u float64, how string, ok bool) {
 	now := float64(c.n) / c.rate
-	p, h := c.pulses.told.when(now), c.host.told.when(now)
+	var p, h told
+	if h = c.host.told.when(now); c.pulses != nil {
+		p = c.pulses.told.when(now)
+	}
+	apart := false
 	switch {
 	case p.ok && h.ok:
 		d, ud := p.e-h.e, math.Hypot(p.u, h.u)
-		how = fmt.Sprintf("second pulses over %s and host clock over %s", spanWords(p.span), spanWords(h.span))
-		if math.Abs(d) > 3*ud {
+		if apart = math.Abs(d) > 3*ud; apart {
 			e, u = (p.e+h.e)/2, math.Hypot(d/2, ud)
-			how += fmt.Sprintf(", which disagree: %+.2f and %+.2f ppm", p.e*1e6, h.e*1e6)
 			break
 		}
 		w := h.u * h.u / (ud * ud)
 		e, u = w*p.e+(1-w)*h.e, p.u*h.u/ud
 	case p.ok:
-		e, u, how = p.e, p.u, "second pulses over "+spanWords(p.span)
+		e, u = p.e, p.u
 	case h.ok:
-		e, u, how = h.e, h.u, "host clock over "+spanWords(h.span)
+		e, u = h.e, h.u
 	default:
-		return math.NaN(), math.NaN(), "", false
+		e, u = math.NaN(), math.NaN()
 	}
+	how = c.from(p, h, apart)
 	if !(u <= clockGood) {
 		return math.NaN(), math.NaN(), how, false
 	}
 	return e, u, how, true
+}
+
+// from says in words what the estimate rests on.
+func (c *clock) from(p, h told, apart bool) string {
+	key := [2]told{p, h}
+	key[0].u, key[1].u = 0, 0 // grows all the time
+	if key == c.wordsFor && apart == c.apart {
+		return c.words
+	}
+	switch c.wordsFor, c.apart = key, apart; {
+	case p.ok && h.ok:
+		c.words = fmt.Sprintf("second pulses over %s and host clock over %s", spanWords(p.span), spanWords(h.span))
+		if apart {
+			c.words += fmt.Sprintf(", which disagree: %+.2f and %+.2f ppm", p.e*1e6, h.e*1e6)
+		}
+	case p.ok:
+		c.words = "second pulses over " + spanWords(p.span)
+	case h.ok:
+		c.words = "host clock over " + spanWords(h.span)
+	default:
+		c.words = ""
+	}
+	return c.words
 }
 
 // spanWords says a time in s as people would.

@@ -41,10 +41,12 @@ var Flags = []Flag{Faded, Spread, Twilight, Clipped, Gap, Retuned, Unproven}
 
 // Reading is what one second of sound says. A number that is not known is NaN.
 //
-// Frequencies are in hertz and corrected for the stated sample-rate error.
+// Frequencies are in hertz and corrected for the sample clock's error: the one
+// stated, or else ClockError as soon as it is known.
 // Signs follow the model of the package: Beat > 0 means that the local
 // oscillator is high. All u are standard uncertainties (k = 1) of the quantity
-// as received in the span.
+// as received in the span; OffsetU holds also what the sample clock's adds, as
+// far as that is stated or known.
 type Reading struct {
 	T           float64 // middle of the second, s from the first sample, by the nominal sample clock
 	State       State
@@ -66,8 +68,11 @@ type Reading struct {
 	PhaseRun    int     // grows by one each time continuity of Phase is lost
 	InputDBFS   float64 // rms level of the input in this second, dB of a full-scale sine; -Inf never, NaN when no sample came
 	Clipped     int     // samples at or beyond full scale in this second
-	Flags       []Flag  // in the order of Flags
-	Why         string  // one short sentence: why it believes what it believes
+	ClockError  float64 // e of the sample clock as found from second pulses and the host's clock, a fraction: true rate = nominal * (1 + e)
+	ClockErrorU float64
+	ClockFrom   string // in words, what that rests on; with ClockError unknown: what contradicts what
+	Flags       []Flag // in the order of Flags
+	Why         string // one short sentence: why it believes what it believes
 }
 
 // Blank returns a Reading with every number unknown.
@@ -75,7 +80,7 @@ func Blank(t float64, s State) Reading {
 	n := math.NaN()
 	return Reading{T: t, State: s, Beat: n, BeatU: n, BeatAbs: n, Error: n, Offset: n, OffsetU: n,
 		CarrierTone: n, LocalTone: n, CarrierDBFS: n, LocalDBFS: n, CarrierCN0: n, LocalCN0: n,
-		SpreadHz: n, Span: n, Phase: n, InputDBFS: n}
+		SpreadHz: n, Span: n, Phase: n, InputDBFS: n, ClockError: n, ClockErrorU: n}
 }
 
 // Has reports whether the reading carries flag f.
@@ -141,6 +146,9 @@ type readingJSON struct {
 	PhaseRun    int    `json:"phase_run"`
 	InputDBFS   Num    `json:"input_dbfs"`
 	Clipped     int    `json:"clipped_samples"`
+	ClockPPM    Num    `json:"clock_error_ppm"`
+	ClockUPPM   Num    `json:"clock_error_u_ppm"`
+	ClockFrom   string `json:"clock_from,omitempty"`
 	Flags       []Flag `json:"flags"`
 	Why         string `json:"why,omitempty"`
 }
@@ -182,6 +190,12 @@ func (r *Reading) AppendJSON(dst []byte) []byte {
 	num(`,"input_dbfs":`, r.InputDBFS)
 	dst = append(dst, `,"clipped_samples":`...)
 	dst = strconv.AppendInt(dst, int64(r.Clipped), 10)
+	num(`,"clock_error_ppm":`, ppm(r.ClockError))
+	num(`,"clock_error_u_ppm":`, ppm(r.ClockErrorU))
+	if r.ClockFrom != "" {
+		dst = append(dst, `,"clock_from":`...)
+		dst = strconv.AppendQuote(dst, r.ClockFrom)
+	}
 	dst = append(dst, `,"flags":[`...)
 	for i, f := range r.Flags {
 		if i > 0 {
@@ -208,6 +222,9 @@ func (r *Reading) UnmarshalJSON(b []byte) error {
 	*r = Reading{float64(j.T), j.State, float64(j.Beat), float64(j.BeatU), float64(j.BeatAbs), float64(j.Error),
 		float64(j.Offset), float64(j.OffsetU), float64(j.CarrierTone), float64(j.LocalTone), float64(j.CarrierDBFS), float64(j.LocalDBFS),
 		float64(j.CarrierCN0), float64(j.LocalCN0), float64(j.SpreadHz), float64(j.Span), float64(j.Phase), j.PhaseRun,
-		float64(j.InputDBFS), j.Clipped, j.Flags, j.Why}
+		float64(j.InputDBFS), j.Clipped, float64(j.ClockPPM) / 1e6, float64(j.ClockUPPM) / 1e6, j.ClockFrom, j.Flags, j.Why}
 	return nil
 }
+
+// ppm returns a fraction in parts per million, to the millionth of one.
+func ppm(v float64) float64 { return math.Round(v*1e12) / 1e6 }

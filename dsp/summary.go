@@ -1,7 +1,6 @@
 package dsp
 
 import (
-	"fmt"
 	"math"
 
 	"offbeat/dsp/stability"
@@ -40,6 +39,9 @@ type Summary struct {
 	SpreadHz       Num               `json:"spread_hz"`
 	DriftPerDay    Num               `json:"drift_per_day"`
 	StateSeconds   map[State]float64 `json:"state_seconds"`
+	ClockPPM       Num               `json:"clock_error_ppm"` // e of the sample clock as found, ppm
+	ClockUPPM      Num               `json:"clock_error_u_ppm"`
+	ClockFrom      string            `json:"clock_from,omitempty"`
 	Method         string            `json:"method"` // how the mean was made, or why there is none
 }
 
@@ -65,8 +67,9 @@ type Summer struct {
 	usable  int
 	tau0    int // seconds between points
 	t0      float64
+	clock   clockSay  // of the latest reading
 	phase   []float64 // cycles, NaN where not known
-	beat    []float64 // Hz; signed if signed, else its size
+	beat    []float64 // by the nominal clock, Hz; signed if signed, else its size
 	u       []float64
 	run     []int32
 	span    []float64 // seconds of sound that the point's reading rests on
@@ -86,7 +89,7 @@ func NewSummer(cfg Config) *Summer {
 	if cfg.Local == 0 {
 		cfg.Local = cfg.Carrier
 	}
-	return &Summer{cfg: cfg, states: map[State]float64{}, tau0: 1}
+	return &Summer{cfg: cfg, states: map[State]float64{}, tau0: 1, clock: noClock}
 }
 
 // Add takes the next reading, in order of time, one for each second.
@@ -110,6 +113,11 @@ func (s *Summer) Add(r Reading) {
 		s.spreadN++
 	}
 	level := s.weigh(&r, beat)
+	s.clock = clockSay{e: r.ClockError, u: r.ClockErrorU, from: r.ClockFrom}
+	// The clock is known better later on: until the end beats are kept by the
+	// nominal one, as phases are.
+	scale := s.clock.scale(&s.cfg)
+	beat, r.BeatU = beat/scale, r.BeatU/scale
 	if s.n%s.tau0 == 0 {
 		if len(s.phase) == summaryPoints {
 			s.halve()
@@ -163,6 +171,7 @@ func (s *Summer) Summary() Summary {
 	nan := Num(math.NaN())
 	out := Summary{Seconds: float64(s.n), UsableSeconds: float64(s.usable), Beat: nan, BeatAbs: nan, BeatU: nan,
 		Error: nan, Offset: nan, OffsetU: nan, OffsetExpanded: nan, K: nan, SpreadHz: nan, DriftPerDay: nan,
+		ClockPPM: Num(ppm(s.clock.e)), ClockUPPM: Num(ppm(s.clock.u)), ClockFrom: s.clock.from,
 		Budget: []BudgetLine{}, Stability: []StabilityPoint{}, StateSeconds: s.states}
 	if s.spreadN > 0 {
 		out.SpreadHz = Num(s.spread / float64(s.spreadN))
@@ -172,6 +181,8 @@ func (s *Summer) Summary() Summary {
 		return out
 	}
 	mean, u, method := s.mean()
+	scale := s.clock.scale(&s.cfg)
+	mean, u = mean*scale, u*scale
 	out.Method = method
 	out.BeatAbs, out.BeatU = Num(math.Abs(mean)), Num(u)
 	out.Stability = s.stability()
@@ -218,11 +229,8 @@ func (s *Summer) whyNothing() string {
 func (s *Summer) budget(mean, u float64) []BudgetLine {
 	fl := s.cfg.Local
 	lines := []BudgetLine{{"noise and fading of the beat", "A", u / fl}}
-	clock, what := s.cfg.SampleRateErrorU, "sample clock, as stated"
-	if clock == 0 {
-		clock, what = clockAllowance/math.Sqrt(3), fmt.Sprintf("sample clock, nothing stated: within %g ppm", clockAllowance*1e6)
-	}
-	lines = append(lines, BudgetLine{what, "B", math.Abs(mean) * clock / fl})
+	clock, _ := s.clock.uncertainty(&s.cfg)
+	lines = append(lines, BudgetLine{s.clock.source(&s.cfg), "B", math.Abs(mean) * clock / fl})
 	if !s.cfg.Wired {
 		lines = append(lines,
 			BudgetLine{"Doppler of the path below the carrier as sent", "B", pathAllowance / math.Sqrt(3)},
@@ -231,8 +239,8 @@ func (s *Summer) budget(mean, u float64) []BudgetLine {
 	return lines
 }
 
-// mean returns the mean beat, its standard uncertainty against the carrier as
-// sent (noise and fading), and how it was made. Within every unbroken run the
+// mean returns the mean beat by the nominal clock, its standard uncertainty
+// against the carrier as sent (noise and fading), and how it was made. Within every unbroken run the
 // phase is regressed on time with one common slope. That is the best there is
 // while the phase noise is white, and its uncertainty is then the regression's.
 // Where the residuals wander further than neighbours differ, the carrier's
@@ -245,7 +253,6 @@ func (s *Summer) mean() (mean, u float64, method string) {
 		return s.weighted()
 	}
 	dt := float64(s.tau0)
-	scale := s.cfg.clockScale()
 	d1, n1 := stability.Overlapping(s.phase, s.run, dt, 1)
 	white := d1 * dt / math.Sqrt(3) // sigma of white phase noise that gives this adev, cycles
 	// In short runs wandering cannot show in the residuals: there the phases must
@@ -255,16 +262,16 @@ func (s *Summer) mean() (mean, u float64, method string) {
 	// level and offset fitted beside the beat. That beats phases told one by one,
 	// unless the run is many spans long.
 	if s.cfg.Hookup != TwoTone && s.cfg.LocalTone == 0 {
-		if m, wu, method := s.weighted(); wu < max(resid, white)/math.Sqrt(sxx)*scale {
+		if m, wu, method := s.weighted(); wu < max(resid, white)/math.Sqrt(sxx) {
 			return m, wu, method
 		}
 	}
 	if points >= 3 && (n1 < 8 || resid < 1.6*white && trusted) && s.wide < s.usable/2 {
 		su := max(resid, s.phaseU(), white) / math.Sqrt(sxx)
-		return slope * scale, su * scale, "phase regression over unbroken runs"
+		return slope, su, "phase regression over unbroken runs"
 	}
 	if mean, u, ok := s.coherent(); ok {
-		return mean * scale, math.Hypot(u, s.phaseU()/math.Sqrt(max(sxx, 1))) * scale, "coherent over the run: the carrier's steady part"
+		return mean, math.Hypot(u, s.phaseU()/math.Sqrt(max(sxx, 1))), "coherent over the run: the carrier's steady part"
 	}
 	if s.wide >= s.usable/2 {
 		if mean, u, ok := s.byPower(); ok {
@@ -281,11 +288,8 @@ func (s *Summer) mean() (mean, u float64, method string) {
 			worst = max(worst, high*math.Sqrt(float64(k)*dt/held))
 		}
 	}
-	return m * scale, max(worst, s.phaseU()/held) * scale, "mean over unbroken runs; uncertainty from the Allan deviation"
+	return m, max(worst, s.phaseU()/held), "mean over unbroken runs; uncertainty from the Allan deviation"
 }
-
-// clockScale returns 1 + e: beats per true second over beats per nominal one.
-func (c *Config) clockScale() float64 { return 1 + c.SampleRateError }
 
 // regress fits phase = offset(run) + slope*t by least squares and returns the
 // slope (Hz), the residuals' standard deviation (cycles), the sum of squares of
@@ -504,5 +508,5 @@ func (s *Summer) drift() float64 {
 	if !(math.Abs(slope) > 2*u) {
 		return math.NaN()
 	}
-	return slope * 86400 / s.cfg.Local
+	return slope * 86400 / s.cfg.Local * s.clock.scale(&s.cfg)
 }
