@@ -56,7 +56,31 @@ type expect struct {
 	ampC, ampL float64 // levels, 0: not known
 	centre     float64 // audio Hz around which to look
 	floor      float64 // density of the noise
+	smear      float64 // rms width of the carrier's fading part, Hz; 0: it stands still
+	haze       float64 // density of that part at its middle
 	leaning    func(f, amp [2]float64, at, uf, ul float64) float64
+}
+
+// spanFits reports whether two lines can stand for a fading carrier and a local
+// over a span: either so short that the fading is slow, and then far enough
+// apart for it not to pass for the other line, or so long that its smear has
+// become noise around a steady part.
+func (x *expect) spanFits(span, sep float64) bool {
+	switch {
+	case x.smear == 0:
+		return true
+	case span*x.smear < 0.3:
+		return math.Abs(sep)*span > 1.5
+	}
+	return span*x.smear > 2.5
+}
+
+// noise returns the density against which a span's lines stand.
+func (x *expect) noise(span float64) float64 {
+	if span*x.smear > 2.5 {
+		return x.floor + x.haze
+	}
+	return x.floor
 }
 
 func newPair(s *slow) *pair { return &pair{slow: s, best: -1} }
@@ -93,7 +117,7 @@ func (p *pair) solve(x *expect) (best *fitted, fresh bool) {
 		case k > 0 && old[k-1].ok:
 			start = &old[k-1]
 		}
-		if start == nil && (any || k == 0 || k > 6) {
+		if start == nil && (any || k == 0 || k > 6) || !x.spanFits(span, 4) {
 			continue
 		}
 		p.slow.fetch(&p.st, x.end, span, x.centre, grain)
@@ -140,7 +164,7 @@ func (p *pair) settle(k int, span float64, t two, cl float64, x *expect) {
 	if span <= 4 {
 		t.cl = cl
 		z, turned := p.try(span, t, free|freeTurn, x)
-		v := max(z.noise, x.floor) / p.st.dt
+		v := max(z.noise, x.noise(span)) / p.st.dt
 		if z.ok && (!y.ok || data-turned > 12*v) {
 			y = z
 		}
@@ -155,7 +179,7 @@ func (p *pair) try(span float64, t two, free int, x *expect) (fitted, float64) {
 	if x.anchor.known {
 		f, u := x.anchor.when(p.st.mid)
 		c, us := x.anchor.drift(p.st.mid)
-		pr = prior{f - p.st.centre, math.Hypot(u, x.anchor.scatter/math.Sqrt(span)), c, us, x.floor}
+		pr = prior{f - p.st.centre, math.Hypot(u, x.anchor.scatter/math.Sqrt(span)), c, us, x.noise(span)}
 	}
 	p.fit.prior = pr
 	t, _ = p.fit.amplitudes(&p.st, t)
@@ -164,10 +188,11 @@ func (p *pair) try(span float64, t two, free int, x *expect) (fitted, float64) {
 		return fitted{}, math.Inf(1)
 	}
 	all, beside := p.fit.leftOver(&p.st, &t)
-	n := max(all, beside, x.floor)
+	floor := x.noise(span)
+	n := max(all, beside, floor)
 	// What the model does not explain is no noise and does not average: the more
 	// there is of it, the less the fit is believed.
-	n *= math.Sqrt(n / x.floor)
+	n *= math.Sqrt(n / floor)
 	y := fitted{two: t, mid: p.st.mid, span: span, centre: p.st.centre, noise: n}
 	y.u, y.uc, y.ul = p.fit.errors(&p.st, n)
 	y.uchirp = p.fit.chirpError(&p.st, n)
@@ -189,7 +214,7 @@ func (p *pair) stands(y *fitted, x *expect) bool {
 	a, b := cmplx.Abs(y.a), cmplx.Abs(y.b)
 	d := math.Abs(y.fl - y.fc)
 	weak := min(a, b)
-	if weak*weak*p.st.used < 20*y.noise || y.u > 0.2*d || d*y.span < 0.2 {
+	if weak*weak*p.st.used < 20*y.noise || y.u > 0.2*d || d*y.span < 0.2 || !x.spanFits(y.span, d) {
 		return false
 	}
 	like := func(v, was float64) bool { return was == 0 || v > 0.4*was && v < 2.5*was }

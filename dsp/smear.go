@@ -41,6 +41,8 @@ type smear struct {
 
 	span  float64 // stretch of the local's last fit, s; 0: none
 	loc   model
+	turns bool    // seen from a local that turns, the carrier's smear cannot be measured
+	still int     // seconds since it did
 	lever float64 // share of the density at the local's frequency that its fit took away in the latest second, 1/s
 
 	mean   float64 // carrier - local in the audio, Hz, smoothed
@@ -83,6 +85,7 @@ type seek struct {
 type hit struct {
 	m           model
 	span        float64
+	turn        float64 // by how much it bends more than the receiver drifts, Hz/s
 	score, next float64 // log-likelihood gain, and that of the best other place
 }
 
@@ -97,10 +100,9 @@ func (s *smear) find(b *band, x *seek) bool {
 	var best hit
 	for span := 2.0; span <= longSpan; span *= 2 {
 		h, ok := s.try(b, span, 0, x)
-		if !ok {
-			h, ok = hit{}, false
-			if span <= 4 && best.span == 0 {
-				h, ok = s.turning(b, span, x)
+		if span <= 4 {
+			if t, turns := s.turning(b, span, x); turns && (!ok || t.score > h.score+4) {
+				h, ok = t, true
 			}
 		}
 		if !ok {
@@ -118,10 +120,13 @@ func (s *smear) find(b *band, x *seek) bool {
 		}
 		best = h
 	}
-	if best.span == 0 {
+	// In the middle of the smear only a line that rests can be told from its tops.
+	inside := math.Abs(best.m.when(x.end)-x.haze.mu) < 2.5*x.haze.sigma
+	if best.span == 0 || inside && best.span < 8 {
 		s.span = 0
 		return false
 	}
+	s.moving(best.span <= 4)
 	s.loc, s.span = best.m, best.span
 	s.lever = leverage(best.span)
 	return true
@@ -183,6 +188,9 @@ func (s *smear) try(b *band, span, turn float64, x *seek) (hit, bool) {
 	}
 	s.dft = scores
 	cells := math.Log(max(2, 2*reach*span))
+	if turn != 0 {
+		cells += math.Log(17)
+	}
 	if out.score < 8+cells || out.score-out.next < 6 {
 		return out, false
 	}
@@ -199,8 +207,17 @@ func (s *smear) try(b *band, span, turn float64, x *seek) (hit, bool) {
 	m.amp = cmplx.Abs(amp) / b.gain(f+centre-b.centre)
 	osc := b.oscillator(m.at) + (s.slow.centre-b.centre)*m.at
 	m.phase = cphase(amp) + osc + frac1((centre-s.slow.centre)*m.at)
-	out.span = span
+	out.span, out.turn = span, turn
 	return out, true
+}
+
+// moving keeps account of whether the local is being turned.
+func (s *smear) moving(turns bool) {
+	s.still++
+	if turns {
+		s.still = 0
+	}
+	s.turns = s.still < 3 && !math.IsNaN(s.sigma)
 }
 
 func frac1(v float64) float64 { return v - math.Floor(v) }

@@ -41,7 +41,7 @@ func (s *smear) look(l *lens, b *band, mid, want, n0 float64) {
 	s.beat, s.u, s.power, s.powerU = m.mean, m.u, m.power, m.powerU
 	s.phase = cphase(s.at(w, m.mean)) // at the middle, of the second as a whole
 	s.note(w, mid)
-	if s.partial(n0 * phasorRate / (s.loc.amp * s.loc.amp)) {
+	if !s.turns && s.partial(n0*phasorRate/(s.loc.amp*s.loc.amp)) {
 		s.beat, s.power = math.NaN(), 0
 		for k := range int64(phasorRate) {
 			s.ring[(s.n-1-k)%int64(len(s.ring))] = 0
@@ -146,6 +146,9 @@ func (s *smear) at(w *window, f float64) complex128 {
 // note puts the second's phasors into the ring, or nothing for nil, and
 // estimates the width from it.
 func (s *smear) note(w *window, mid float64) {
+	if s.turns {
+		w = nil
+	}
 	if w != nil && s.power > 0 {
 		s.slowly += (s.power - s.slowly) / 20
 		if s.slowly < s.power/20 {

@@ -35,6 +35,10 @@ func (e *twoTone) followClose(mid float64) bool {
 	e.slow.advance(b)
 	g := b.gain(centre - b.centre)
 	x := expect{end: mid + 0.5, anchor: &e.anchor, leaning: e.leaning, centre: centre, ampC: e.memory.ampC * g, ampL: e.memory.ampL * g, floor: t.noise * g * g}
+	if sm := e.sm; sm.sigma > spreadLeast && sm.steady < 0.97 {
+		x.smear = sm.sigma / math.Sqrt(1-sm.steady)
+		x.haze = (1 - sm.steady) * x.ampC * x.ampC / (math.Sqrt(2*math.Pi) * x.smear)
+	}
 	if !e.merged && e.pair.best < 0 { // until now they were followed second by second
 		e.pair.seed(&e.tr[1-e.local], &e.tr[e.local])
 		e.sure = true

@@ -16,7 +16,9 @@ func (e *twoTone) identify(mid float64) {
 		if e.local < 0 {
 			e.local = e.whichIsLocal(mid)
 		}
-		if e.local >= 0 && math.Hypot(a.uf, b.uf) < 0.1 {
+		if e.local >= 0 && e.isSpread() {
+			e.remember(mid)
+		} else if e.local >= 0 && math.Hypot(a.uf, b.uf) < 0.1 {
 			c, l := &e.tr[1-e.local], &e.tr[e.local]
 			// A tone that came back goes on with the evidence it had.
 			for _, x := range []struct {

@@ -54,10 +54,21 @@ func (e *twoTone) spot(mid float64) bool {
 	if far < 20*n0/spotSpan+8*n0*math.Sqrt(2*spotReach/spotSpan) || far < 0.02*a2 || width < 0.15 || width > 4 {
 		return false
 	}
-	// The carrier must not be a line of its own.
-	g2, d2 := p.peak(mean-3*width, mean+3*width, 0, f, 0.7)
-	if d2*step > 0.7*far || math.Abs(g2-f) < 0.7 {
-		return false
+	// The carrier must not be a line of its own, nor one that is being turned.
+	for k := -40; k <= 40; k++ {
+		turn := float64(k) * 0.0125
+		g2, d2 := p.peak(mean-2*width, mean+2*width, turn, f, 0.7)
+		if d2*step > 0.5*far || turn == 0 && math.Abs(g2-f) < 0.7 {
+			return false
+		}
+	}
+	if m := &e.memory; m.known {
+		// Of a pair that was known the carrier must have been a smeared one, and
+		// the line must be as loud as the local was.
+		level := 20 * math.Log10(math.Sqrt(a2)/m.ampL)
+		if !(e.sm.sigma > wideSpread) || math.Abs(level) > 6 {
+			return false
+		}
 	}
 	if e.spotted == 0 || math.Abs(f+st.centre-e.spotAt) > 0.1 {
 		e.spotted = 0

@@ -25,6 +25,7 @@ func (e *twoTone) fade(mid float64) {
 	dt := mid - e.sm.loc.at
 	turning := dt > 5 || math.Abs(guess.f-e.sm.loc.f-slope*dt) > 0.008+5*l.uf+3*us*dt
 	e.sm.loc, e.sm.span, e.sm.lever = guess, 1, 0
+	e.sm.moving(turning)
 	if turning {
 		e.sm.note(nil, mid)
 		if c.live {
@@ -102,7 +103,7 @@ func (e *twoTone) lookBeside(c *track, mid float64) {
 	}
 	g := b.gain(e.sm.loc.f + want - b.centre)
 	a2 := e.sm.loc.amp * e.sm.loc.amp
-	if w := e.sm.width(n0 / (g * g) * phasorRate / a2); !math.IsNaN(w) {
+	if w := e.sm.width(n0 / (g * g) * phasorRate / a2); !math.IsNaN(w) && !e.sm.turns {
 		e.sm.sigma = w
 	}
 	if e.sm.n%(5*phasorRate) == 0 {
@@ -149,7 +150,8 @@ func (e *twoTone) followSpread(mid float64) bool {
 	slope, us := e.anchor.drift(end)
 	x := seek{end: end, amp: e.memory.ampL * g, slope: slope, us: us}
 	x.lo, x.hi = 0.6*x.amp, 1.6*x.amp
-	x.haze = haze{e.sm.slowly, e.sm.sigma, carrier, max(l.noise*g*g, 1e-12*x.amp*x.amp)}
+	// A little more smear than was seen: its skirts must not pass for the line.
+	x.haze = haze{1.5 * e.sm.slowly, 1.25*e.sm.sigma + 0.02, carrier, max(l.noise*g*g, 1e-12*x.amp*x.amp)}
 	x.f, x.reach = e.sm.loc.when(end), 0.7
 	if e.sm.span == 0 { // anywhere about the carrier
 		x.f, x.reach = carrier, 4
@@ -177,6 +179,11 @@ func (e *twoTone) followSpread(mid float64) bool {
 	c.f, c.at = carrier-slope*0.5, mid
 	e.lookBeside(c, mid)
 	c.tail, c.whole = true, false
+	if e.sm.turns && math.Abs(l.f-carrier) < 1+4*e.sm.sigma {
+		// What a moving line leaves behind would pull the smear beside it.
+		e.sm.beat = math.NaN()
+		return true
+	}
 	if math.IsNaN(e.sm.beat) {
 		if e.dim++; e.dim > 20 {
 			return false
@@ -194,4 +201,19 @@ func (e *twoTone) followSpread(mid float64) bool {
 	c.whole = true
 	c.seen++
 	return true
+}
+
+// remember takes the pair along while the carrier is smeared. The local's level
+// is what its line is known by: it may follow only slowly, and only what a long
+// span has shown, lest it wanders off with a peak of the smear.
+func (e *twoTone) remember(mid float64) {
+	c, l, m := &e.tr[1-e.local], &e.tr[e.local], &e.memory
+	m.at, m.carrier, m.local = mid, c.f, l.f
+	m.ampC += 0.05 * (c.amp - m.ampC)
+	if r := l.amp / m.ampL; e.sm.span >= 8 && r > 0.85 && r < 1.18 {
+		m.ampL += 0.05 * (l.amp - m.ampL)
+	}
+	if !math.IsNaN(e.sm.beat) {
+		e.anchor.add(mid, c.f, math.Hypot(c.uf, 0.001))
+	}
 }
