@@ -195,6 +195,8 @@ func (p *pair) try(span float64, t two, free int, x *expect) (fitted, float64) {
 	n *= math.Sqrt(n / floor)
 	y := fitted{two: t, mid: p.st.mid, span: span, centre: p.st.centre, noise: n}
 	y.u, y.uc, y.ul = p.fit.errors(&p.st, n)
+	// A drifting tone slides along the filters' flanks.
+	y.u = math.Hypot(y.u, 3e-3*math.Abs(t.c))
 	y.uchirp = p.fit.chirpError(&p.st, n)
 	y.level = p.fit.levelError(&p.st, &t, n)
 	data := p.fit.data

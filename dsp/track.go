@@ -21,6 +21,7 @@ type track struct {
 	tail  bool    // there at the end of the last window
 	seen  int     // windows in a row that showed it
 	ev    evidence
+	jit   jitter
 }
 
 // cn0 returns the tone's C/N0 as a ratio, Hz.
@@ -210,6 +211,7 @@ func (l *lens) take(t *track, b *band, mid float64, ln int) {
 	case t.seen >= 2 && mid > t.at && mid-t.at < 3:
 		t.c += 0.3 * ((f-t.f)/(mid-t.at) - t.c)
 	}
+	t.jit.add(mid, f, x.uf*math.Sqrt(t.noise)*gain)
 	t.f, t.at = f, mid
 	t.amp = cmplx.Abs(x.a) / gain
 	t.phase = cphase(x.a) + b.oscillator(mid)

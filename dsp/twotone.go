@@ -19,6 +19,7 @@ const (
 // pairMemory is what is remembered of the two tones once they were known.
 type pairMemory struct {
 	known          bool
+	crossed        bool    // the sign of their difference may have changed since
 	at             float64 // s
 	carrier, local float64 // Hz
 	ampC, ampL     float64
@@ -57,8 +58,11 @@ type twoTone struct {
 	spotted  int     // how often in a row a line was seen to stand still beside a smear, and where
 	spotAt   float64
 	why      string // what settled which tone is which
-	lostLine int    // seconds for which the local's line has not been found in the smear
-	dim      int    // seconds in a row without the carrier's power beside the local
+	hidden   bool   // the local's line is somewhere in the smear
+	hits     int    // how often in a row it was found there again, and where
+	hitAt    float64
+	lostLine int // seconds for which the local's line has not been found in the smear
+	dim      int // seconds in a row without the carrier's power beside the local
 }
 
 func newTwoTone(cfg *Config, p *plan, r *raw) *twoTone {
@@ -99,6 +103,9 @@ func (e *twoTone) second(i int64) Reading {
 	e.last = i
 	e.closest = nil
 	spread := e.isSpread() && e.followSpread(mid)
+	if spread && e.hidden {
+		return e.reading(mid)
+	}
 	if !spread && e.closeBy(mid) && e.followClose(mid) && e.sure {
 		return e.reading(mid)
 	}
@@ -361,6 +368,8 @@ func (e *twoTone) unmerge(mid float64, k int) {
 	e.jumped = true
 	a, b := &e.tr[0], &e.tr[1]
 	e.local = -1
+	m := &e.memory
+	m.crossed = true // the tones may have passed through each other
 	switch lean := e.leaning([2]float64{a.f, b.f}, [2]float64{a.amp, b.amp}, mid, math.Hypot(a.uf, b.uf), 0); {
 	case lean > sureEnough:
 		e.local = 1

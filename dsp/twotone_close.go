@@ -114,8 +114,11 @@ func (e *twoTone) leaning(f, amp [2]float64, at, uf, level float64) float64 {
 	if m.known {
 		was := 20 * math.Log10(m.ampC/m.ampL)
 		is := 20 * math.Log10(amp[0]/amp[1])
-		v := 4 + m.evC.varies + 75*level*level
-		sum += max(-4, min(4, ((-is-was)*(-is-was)-(is-was)*(is-was))/(2*v)))
+		v, most := 4+m.evC.varies+75*level*level, 4.0
+		if e.sm.sigma > spreadLeast {
+			most = 1 // the level of a carrier that fades says little
+		}
+		sum += max(-most, min(most, ((-is-was)*(-is-was)-(is-was)*(is-was))/(2*v)))
 	}
 	return sum
 }

@@ -30,7 +30,7 @@ func (e *twoTone) identify(mid float64) {
 				}
 			}
 			e.anchor.add(mid, c.f, c.uf)
-			e.memory = pairMemory{true, mid, c.f, l.f, c.amp, l.amp, c.ev, l.ev}
+			e.memory = pairMemory{true, false, mid, c.f, l.f, c.amp, l.amp, c.ev, l.ev}
 		}
 		return
 	}
@@ -67,7 +67,11 @@ func (e *twoTone) whichIsLocal(mid float64) int {
 		}
 		return -1
 	}
-	if m := &e.memory; m.known {
+	if k := e.byJitter(); k >= 0 {
+		e.asked = true
+		return k
+	}
+	if m := &e.memory; m.known && !m.crossed {
 		return e.byMemory(mid, diff)
 	}
 	if hint := e.cfg.LocalTone; hint != 0 && !e.asked {

@@ -4,7 +4,7 @@ import "math"
 
 const (
 	nearTones  = 12.0 // tones closer than this share the slow ring, Hz
-	wideSpread = 0.08 // Hz: a carrier wider than this is not followed as a line
+	wideSpread = 0.05 // Hz: a carrier wider than this is not followed as a line
 )
 
 // fade looks at the carrier's fading once both tones are known: the local's
@@ -131,20 +131,42 @@ func (e *twoTone) noiseBeside(ln *lens, b *band, f, mid float64) float64 {
 
 // isSpread reports whether the carrier is too wide to be followed as a line.
 func (e *twoTone) isSpread() bool {
-	return e.local >= 0 && e.held() > 0 && e.sm.sigma > wideSpread && e.sm.slowly > 0 && e.sm.steady < 0.5
+	return e.local >= 0 && (e.hidden || e.held() > 0) && e.sm.sigma > wideSpread && e.sm.slowly > 0 && e.sm.steady < 0.5
 }
 
 // followSpread finds the local's line in the carrier's smear and measures the
 // carrier's power beside it, in the second around mid. It returns false when
-// the line is not found.
+// this is not its business any more.
 func (e *twoTone) followSpread(mid float64) bool {
 	l, c := &e.tr[e.local], &e.tr[1-e.local]
-	if l.band == nil || !e.merged && !e.near(c, l) {
+	if l.band == nil || !e.hidden && !e.merged && !e.near(c, l) {
+		e.hidden = false
 		return false
 	}
 	b := l.band
 	e.advance(l, c)
 	end := mid + 0.5
+	x := e.seekLocal(b, l, end)
+	if !e.sm.find(b, &x) || !e.trusts(&x) {
+		return e.hide(b, l, mid)
+	}
+	if e.lostLine > 0 {
+		e.count.broken()
+		e.jumped = true
+	}
+	e.lostLine, e.hits, e.hidden, e.merged = 0, 0, false, false
+	m := &e.sm.loc
+	l.live, l.band = true, b
+	l.f, l.c, l.at, l.amp, l.uf = m.when(mid), m.c, mid, m.amp, m.uf
+	l.phase = m.turnsAt(mid)
+	l.whole, l.tail = true, true
+	l.seen++
+	e.takeSmeared(c, l, b, x.haze.mu, mid)
+	return true
+}
+
+// seekLocal says where the local's line is to be looked for.
+func (e *twoTone) seekLocal(b *band, l *track, end float64) seek {
 	g := b.gain(l.f - b.centre)
 	carrier, _ := e.anchor.when(end)
 	slope, us := e.anchor.drift(end)
@@ -154,44 +176,91 @@ func (e *twoTone) followSpread(mid float64) bool {
 	x.haze = haze{1.5 * e.sm.slowly, 1.25*e.sm.sigma + 0.02, carrier, max(l.noise*g*g, 1e-12*x.amp*x.amp)}
 	x.f, x.reach = e.sm.loc.when(end), 0.7
 	if e.sm.span == 0 { // anywhere about the carrier
-		x.f, x.reach = carrier, 4
+		x.f, x.reach = carrier, 6
 	}
-	if !e.sm.find(b, &x) {
-		e.lostLine++
+	return x
+}
+
+// trusts reports whether the line just found is to be believed: not one that
+// turns close to the smear, and after it was lost only one that has rested for
+// some seconds and was found twice.
+func (e *twoTone) trusts(x *seek) bool {
+	sep := math.Abs(e.sm.loc.when(x.end) - x.haze.mu)
+	if e.sm.span <= 4 && sep < 1+4*e.sm.sigma {
 		return false
 	}
-	if e.lostLine > 0 {
-		e.count.broken()
-		e.lostLine = 0
+	if !e.hidden {
+		return true
 	}
-	e.merged = false
-	m := &e.sm.loc
-	l.live, l.band = true, b
-	l.f, l.c, l.at, l.amp, l.uf = m.when(mid), m.c, mid, m.amp, m.uf
-	l.phase = m.turnsAt(mid)
-	l.whole, l.tail = true, true
-	l.seen++
+	if e.sm.span < 8 {
+		return false
+	}
+	if math.Abs(e.sm.loc.when(x.end)-e.hitAt) > 0.1 {
+		e.hits = 0
+	}
+	e.hitAt = e.sm.loc.when(x.end)
+	e.hits++
+	return e.hits >= 2
+}
+
+// hide says that the local's line is somewhere in the smear. For a while it is
+// looked for there; then both tones are looked for afresh.
+func (e *twoTone) hide(b *band, l *track, mid float64) bool {
+	if !e.hidden {
+		e.count.broken()
+		e.hidden, e.hits = true, 0
+	}
+	e.sm.span, e.sm.beat = 0, math.NaN()
+	e.sm.moving(true)
+	e.merged = true
+	e.lostLine++
+	ln := e.lens
+	ln.open(b, mid, 1, edge)
+	power := 0.0
+	for i, z := range ln.win.z {
+		power += ln.win.w[i] * (real(z)*real(z) + imag(z)*imag(z))
+	}
+	power *= ln.win.dt / max(ln.win.used, 1e-9)
+	if power < 0.2*e.sm.slowly {
+		e.dim++
+	} else {
+		e.dim = 0
+	}
+	if e.lostLine > 150 || e.dim > 5 {
+		e.hidden, e.merged, e.local, e.lostLine, e.dim = false, false, -1, 0, 0
+		e.sm.forget()
+		e.memory.known = false
+		for k := range e.tr {
+			e.tr[k].live = false
+		}
+		return false
+	}
+	l.live, l.at, l.whole, l.tail = true, mid, false, true
+	l.f, _ = e.anchor.when(mid)
+	return true
+}
+
+// takeSmeared measures the carrier beside the local's line and moves its track.
+func (e *twoTone) takeSmeared(c, l *track, b *band, carrier, mid float64) {
 	if !c.live {
-		noise := c.noise
-		*c = track{noise: noise, ev: c.ev}
+		*c = track{noise: c.noise, ev: c.ev}
 	}
 	c.band, c.live = b, true
-	c.f, c.at = carrier-slope*0.5, mid
+	c.f, c.at = carrier, mid
 	e.lookBeside(c, mid)
 	c.tail, c.whole = true, false
 	if e.sm.turns && math.Abs(l.f-carrier) < 1+4*e.sm.sigma {
 		// What a moving line leaves behind would pull the smear beside it.
 		e.sm.beat = math.NaN()
-		return true
 	}
 	if math.IsNaN(e.sm.beat) {
 		if e.dim++; e.dim > 20 {
-			return false
+			c.live = false
 		}
-		return true
+		return
 	}
 	e.dim = 0
-	c.f, c.c, c.at = l.f+e.sm.beat, slope, mid
+	c.f, c.c, c.at = l.f+e.sm.beat, l.c, mid
 	c.amp = math.Sqrt(e.sm.power) / b.gain(c.f-b.centre)
 	if !(c.noise > 0) {
 		c.noise = l.noise
@@ -200,7 +269,6 @@ func (e *twoTone) followSpread(mid float64) bool {
 	c.uf = e.sm.u
 	c.whole = true
 	c.seen++
-	return true
 }
 
 // remember takes the pair along while the carrier is smeared. The local's level
