@@ -27,7 +27,7 @@ import (
 //
 // Once found, only the sound about every expected pulse is looked at, and every
 // fifteenth minute all of it, so that a false find is let go and another epoch is
-// noticed. While nothing is found after twelve minutes, two minutes in twenty
+// noticed. While nothing is found after twelve minutes, two minutes in thirty
 // are listened to, and whatever looks like a pulse makes it listen on.
 type pulses struct {
 	rate    float64
@@ -272,7 +272,7 @@ func (p *pulses) listening() bool {
 	if len(p.heard) == 0 {
 		return false
 	}
-	due := p.minute < p.eager || math.Mod(p.minute, 20) < 2
+	due := p.minute < p.eager || math.Mod(p.minute, 30) < 2
 	if p.locked && p.misses < 12 {
 		due = p.misses >= 2 || math.Mod(p.minute, 15) == 0
 	}

@@ -100,6 +100,9 @@ func (c clockSay) source(cfg *Config) string {
 	case c.from != "":
 		return fmt.Sprintf("sample clock, within %g ppm: %s", clockAllowance*1e6, c.from)
 	}
+	if cfg.clockStated() {
+		return fmt.Sprintf("sample clock, no uncertainty stated: within %g ppm", clockAllowance*1e6)
+	}
 	return fmt.Sprintf("sample clock, nothing stated: within %g ppm", clockAllowance*1e6)
 }
 

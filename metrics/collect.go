@@ -32,6 +32,8 @@ var gauges = []struct {
 	{toneCN0, "local", func(r *dsp.Reading) float64 { return r.LocalCN0 }},
 	{desc("doppler_spread_hertz", "Root-mean-square Doppler width of the carrier.", "bench"), "", func(r *dsp.Reading) float64 { return r.SpreadHz }},
 	{desc("span_seconds", "How much sound the beat rests on.", "bench"), "", func(r *dsp.Reading) float64 { return r.Span }},
+	{desc("sample_clock_error_ratio", "By how much the sample clock was found to be fast, a fraction.", "bench"), "", func(r *dsp.Reading) float64 { return r.ClockError }},
+	{desc("sample_clock_error_uncertainty_ratio", "Standard uncertainty of the sample clock's error.", "bench"), "", func(r *dsp.Reading) float64 { return r.ClockErrorU }},
 	{desc("input_level_dbfs", "Root-mean-square level of the input, in decibels of a full-scale sine.", "bench"), "", func(r *dsp.Reading) float64 { return r.InputDBFS }},
 }
 

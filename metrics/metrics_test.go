@@ -33,6 +33,7 @@ func fixed() (*Exporter, *Bench, *time.Time) {
 	r.Beat, r.BeatAbs, r.BeatU, r.Error, r.Offset, r.OffsetU = 3.25, 3.25, 0.001, 3.25, 3.25e-7, 1e-10
 	r.CarrierTone, r.LocalTone, r.CarrierDBFS, r.LocalDBFS, r.CarrierCN0, r.LocalCN0 = 1000, 1003.25, -20, -18, 55, 57
 	r.Span, r.InputDBFS, r.Clipped, r.PhaseRun = 1, -12, 3, 2
+	r.ClockError, r.ClockErrorU = 23.5e-6, 1.5e-7
 	r.Flags = []dsp.Flag{dsp.Clipped}
 	b.Reading(r)
 	b.Samples(96000, 1)

@@ -24,11 +24,13 @@ func writeSummary(w io.Writer, s *dsp.Summary, cfg dsp.Config) {
 		line("Beat", "%s (k = 2), size only: %s", unsigned(abs, 2*float64(s.BeatU)), whyUnsigned(cfg))
 		line("Offset", "%s in size", strings.TrimPrefix(offsetWithU(abs/local(cfg), 2*float64(s.BeatU)/local(cfg)), "+"))
 		line("Method", "%s", s.Method)
+		writeClock(line, s, cfg)
 		writeStability(w, s)
 		return
 	}
 	writeVerdict(line, s, cfg)
 	line("Method", "%s", s.Method)
+	writeClock(line, s, cfg)
 	if len(s.Budget) > 0 {
 		fmt.Fprintln(w, "\nWhere the uncertainty comes from (standard uncertainty of the offset):")
 		for _, b := range s.Budget {
@@ -63,6 +65,23 @@ func writeVerdict(line func(head, format string, args ...any), s *dsp.Summary, c
 	if v := float64(s.SpreadHz); !math.IsNaN(v) && v > 0 {
 		line("Spread", "the carrier is smeared by %.2g Hz (rms)", v)
 	}
+}
+
+// writeClock says what was found of the sample clock.
+func writeClock(line func(head, format string, args ...any), s *dsp.Summary, cfg dsp.Config) {
+	e, u := float64(s.ClockPPM), float64(s.ClockUPPM)
+	if math.IsNaN(e) {
+		return
+	}
+	use := "taken into account"
+	if cfg.SampleRateError != 0 || cfg.SampleRateErrorU != 0 {
+		use = fmt.Sprintf("the stated %+g ppm was used", cfg.SampleRateError*1e6)
+	}
+	side := "fast"
+	if e < 0 {
+		side = "slow"
+	}
+	line("Clock", "the sample clock is %s by %s (k = 2), from %s; %s", side, strings.TrimPrefix(withU(math.Abs(e), 2*u, "ppm"), "+"), s.ClockFrom, use)
 }
 
 // whyUnsigned says why it is not known which of the two is high.

@@ -120,6 +120,8 @@ type bench struct {
 	open   int   // the opening of the input that dsp was made for
 	planes []int // which planes of a block are ours
 	ch     [][]float32
+	kept   func() bool // the host's clock is disciplined
+	marked int64       // the sample of the line that the host's clock was read for last
 }
 
 // newBench returns a bench that is not running yet. fill says that its input is
@@ -130,7 +132,7 @@ func newBench(set settings, out listener, fill bool) *bench {
 	if fill {
 		depth = liveDepth
 	}
-	b := &bench{set: set, out: out, fill: fill, now: time.Now, ear: newEar(set.channels(), depth)}
+	b := &bench{set: set, out: out, fill: fill, now: time.Now, kept: hostClockKept, ear: newEar(set.channels(), depth)}
 	b.ear.drops = fill
 	return b
 }
@@ -222,8 +224,23 @@ func (b *bench) take(s *shared) {
 	for i, p := range b.planes {
 		b.ch[i] = s.Ch[p]
 	}
+	b.mark(s)
 	b.out.samples(s.Len(), s.NonFinite)
 	b.dsp.Samples(b.ch)
+}
+
+// mark tells the bench about once a second what time it is, so that it finds the
+// error of the sample clock. A disciplined clock is needed for that; the simulated
+// bench says its own true time.
+func (b *bench) mark(s *shared) {
+	n := b.line.wallN
+	if !s.format.Live || s.Wall.IsZero() || float64(n-b.marked) < b.line.rate {
+		return
+	}
+	b.marked = n
+	if b.set.Input.Kind == kindSimulate || b.kept() {
+		b.dsp.Mark(n, s.Wall)
+	}
 }
 
 // wait counts sound as missing while nothing arrives: each second still gets
@@ -266,7 +283,7 @@ func (b *bench) reopened(s *shared) error {
 		b.dsp = nil
 		return err
 	}
-	b.dsp = d
+	b.dsp, b.marked = d, 0
 	b.line.start(s.format.Rate, b.now())
 	b.line.next = s.First // what was lost before we listened is not ours
 	b.out.opened(s.format, d.Config())
