@@ -36,7 +36,7 @@ type Config struct {
 	Carrier          float64  // fC, nominal carrier frequency, Hz; default 10e6
 	Local            float64  // fL, the local's nominal frequency as heard (harmonic * nominal + set-off), Hz; default Carrier
 	LocalTone        float64  // roughly where the local's tone is at the start, Hz; 0: not told
-	SampleRateError  float64  // e, a fraction (not ppm)
+	SampleRateError  float64  // e, a fraction (not ppm); with the next one 0 too: not stated, and used as it is found
 	SampleRateErrorU float64  // standard uncertainty of e, a fraction
 	SearchLow        float64  // edges of the search for tones, Hz; 0, 0: from the rate
 	SearchHigh       float64

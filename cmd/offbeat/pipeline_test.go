@@ -421,3 +421,43 @@ func TestNoAllocationPerBlock(t *testing.T) {
 		t.Errorf("%v allocations per block", n)
 	}
 }
+
+// The time of day reaches the bench only where it says something of the sample
+// clock: with live sound, and a host's clock that is disciplined or simulated.
+func TestHostClock(t *testing.T) {
+	const e, rate = 200e-6, 1000
+	for _, c := range []struct {
+		name             string
+		kind             string
+		kept, live, wall bool
+		found            bool
+	}{
+		{"a sound card", kindSound, true, true, true, true},
+		{"a pipe", kindPipe, true, true, true, true},
+		{"the host's clock runs free", kindSound, false, true, true, false},
+		{"the simulated bench, whatever the host's clock", kindSimulate, false, true, true, true},
+		{"a recording", kindRecording, true, false, true, false},
+		{"no time told", kindSound, true, true, false, false},
+	} {
+		k := newClocked(t)
+		k.b.set.Input.Kind, k.b.kept, k.b.fill = c.kind, func() bool { return c.kept }, false
+		k.b.open, k.b.dsp = 0, nil // opened anew
+		k.b.set.Hookup, k.b.set.LocalTone, k.src.format.Rate, k.src.format.Live = dsp.Mixer, 0, rate, c.live
+		start := k.now
+		for n := 0; n < 420; n++ {
+			s := &shared{format: k.src.format, channels: []int{1}, opening: 1, home: make(chan *shared, 1)}
+			s.left.Store(1)
+			s.Reset(1)
+			s.Ch[0], s.First = append(s.Ch[0], make([]float32, rate)...), int64(n)*rate
+			if c.wall { // each block comes up to 5 ms late
+				s.Wall = start.Add(time.Duration(float64(n)/(1+e)*1e9) + time.Duration(n*37%50)*100*time.Microsecond)
+			}
+			k.b.take(s)
+		}
+		r := k.out.got[len(k.out.got)-1]
+		if found := !math.IsNaN(r.ClockError); found != c.found || found && math.Abs(r.ClockError-e) > 5e-6 {
+			t.Errorf("%s: clock %g, u %g, %q", c.name, r.ClockError, r.ClockErrorU, r.ClockFrom)
+		}
+	}
+	t.Log("this host's clock is disciplined:", hostClockKept())
+}
