@@ -45,7 +45,8 @@ What is in the audio:
   --wired               the carrier is a house reference on a wire: it does not fade
   --channel N           channel of the input, from 1 (default 1; quadrature: 1,2)
   --sample-rate-error PPM
-                        by how much the sample clock is fast, if it is known
+                        by how much the sample clock is fast, if it is known; else
+                        it is found from second pulses, where there are any
   --sample-rate-error-u PPM
                         standard uncertainty of that
 
