@@ -15,7 +15,7 @@ VERSION = $(shell git describe --tags --always --dirty 2>/dev/null || echo devel
 LDFLAGS = -s -w -X main.version=$(VERSION)
 
 .DEFAULT_GOAL := help
-.PHONY: help run build test lint bench need-sound need-test
+.PHONY: help run build test lint bench bench-accuracy need-sound need-test
 
 help: ## this list
 	@sed -n 's/^\([a-z][a-z-]*\):.*## \(.*\)/  make \1\t\2/p' $(MAKEFILE_LIST) | expand -t 20
@@ -43,6 +43,9 @@ bench: build need-test ## the figures: accuracy against the bounds, speed, memor
 	OFFBEAT_LONG=1 CGO_ENABLED=$(CGO) $(GO) test $(TAGS) -timeout 60m -count=1 -v -run 'Bound|Bias|NoiseHour|Uncertainty|Quadrature|Mixer' ./dsp | grep -E 'ratio|bias|readings|u/rms|^(---|ok|FAIL)|Hz/|panic'
 	CGO_ENABLED=$(CGO) $(GO) test $(TAGS) -run '^$$' -bench . -benchmem ./dsp ./capture/...
 	OFFBEAT_LONG=1 CGO_ENABLED=$(CGO) $(GO) test $(TAGS) -timeout 30m -count=1 -v -run 'TestSpeed|TestLoad|TestMemory' ./cmd/offbeat
+
+bench-accuracy: ## every accuracy figure beside its limit (about an hour)
+	CGO_ENABLED=0 $(GO) run ./cmd/accuracy --scenes 200
 
 need-sound:
 	@$(NEED) "sound-card support" portaudio19-dev pkg-config gcc libc6-dev

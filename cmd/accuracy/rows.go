@@ -16,6 +16,12 @@ func table() []row {
 	t = append(t, closeRows()...)
 	t = append(t, zeroRows()...)
 	t = append(t, fadingRows()...)
+	t = append(t, smearRows()...)
+	t = append(t, identityRows()...)
+	t = append(t, nothingRows()...)
+	t = append(t, weakRows()...)
+	t = append(t, clockRows()...)
+	t = append(t, singleRows()...)
 	return t
 }
 
