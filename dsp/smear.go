@@ -52,7 +52,7 @@ type smear struct {
 	powerU float64
 	phase  float64 // carrier - local at the second's middle, turns
 	sigma  float64 // rms Doppler width, Hz; NaN: not known
-	steady float64 // share of the carrier's power in one line, 0 to 1
+	steady float64 // share of the carrier's power in one line, 0 to 1; NaN: not known
 	slowly float64 // power of the carrier over some twenty seconds
 
 	ring [phasorRate * phasorSpan]complex128 // of the carrier by the local, turned back by ref*t; 0: none
@@ -62,12 +62,12 @@ type smear struct {
 }
 
 func newSmear(s *slow) *smear {
-	return &smear{slow: s, beat: math.NaN(), sigma: math.NaN()}
+	return &smear{slow: s, beat: math.NaN(), sigma: math.NaN(), steady: math.NaN()}
 }
 
 // forget starts afresh, as when the pair is lost.
 func (s *smear) forget() {
-	s.span, s.beat, s.sigma, s.slowly, s.steady = 0, math.NaN(), math.NaN(), 0, 0
+	s.span, s.beat, s.sigma, s.slowly, s.steady = 0, math.NaN(), math.NaN(), 0, math.NaN()
 	s.ring = [len(s.ring)]complex128{}
 }
 
@@ -122,7 +122,7 @@ func (s *smear) find(b *band, x *seek) bool {
 	}
 	// In the middle of the smear only a line that rests can be told from its tops.
 	inside := math.Abs(best.m.when(x.end)-x.haze.mu) < 2.5*x.haze.sigma
-	if best.span == 0 || inside && best.span < 8 {
+	if best.span == 0 || inside && (best.span < 8 || math.IsNaN(s.steady)) {
 		s.span = 0
 		return false
 	}

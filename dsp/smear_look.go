@@ -158,6 +158,13 @@ func (s *smear) note(w *window, mid float64) {
 	if w != nil && math.Abs(s.beat-s.ref) > 2 && math.Abs(s.mean-s.ref) > 1 {
 		s.turnRing(s.mean)
 	}
+	// The ring's places are tenths of a second: what was not looked at stays empty.
+	for at := int64(math.Round((mid - 0.5) * phasorRate)); s.n < at; s.n++ {
+		if s.n < at-int64(len(s.ring)) {
+			s.n = at - int64(len(s.ring))
+		}
+		s.ring[s.n%int64(len(s.ring))] = 0
+	}
 	for k := range phasorRate {
 		i := s.n % int64(len(s.ring))
 		s.n++
@@ -222,6 +229,11 @@ func (s *smear) width(noise float64) float64 {
 	if zero <= 0 {
 		return math.NaN()
 	}
+	// What stands still in the carrier never loses its likeness: it is left out.
+	still := 0.0
+	if s.steady > 0.3 && s.steady < 0.97 {
+		still = s.steady
+	}
 	out := 0.0
 	for _, lag := range [...]int{1, 2, 4, 8, 16, 32, 64, 128} {
 		var r complex128
@@ -246,8 +258,9 @@ func (s *smear) width(noise float64) float64 {
 		if rho >= 1-doubt {
 			continue
 		}
-		out = math.Sqrt(-math.Log(max(rho, 0.02))/(2*math.Pi*math.Pi)) / tau
-		if rho < 0.9 {
+		rho = (rho - still) / (1 - still)
+		out = math.Sqrt(-math.Log(max(0.02, min(1, rho)))/(2*math.Pi*math.Pi)) / tau * math.Sqrt(1-still)
+		if rho < 0.9 && still == 0 || rho < 0.6 {
 			return out
 		}
 	}
@@ -266,7 +279,7 @@ func (s *smear) inOneLine(noise float64) float64 {
 			have++
 		}
 	}
-	if have < n/3 {
+	if have < n/2 {
 		return s.steady
 	}
 	most := 0.0

@@ -107,6 +107,9 @@ func (e *twoTone) second(i int64) Reading {
 		return e.reading(mid)
 	}
 	if !spread && e.closeBy(mid) && e.followClose(mid) && e.sure {
+		if math.Abs(e.closest.sep(mid)) > holdApart && e.closest.span <= 8 {
+			e.fade(mid) // is it a carrier that fades?
+		}
 		return e.reading(mid)
 	}
 	if e.held() > 0 && !spread {

@@ -35,9 +35,13 @@ func (e *twoTone) followClose(mid float64) bool {
 	e.slow.advance(b)
 	g := b.gain(centre - b.centre)
 	x := expect{end: mid + 0.5, anchor: &e.anchor, leaning: e.leaning, centre: centre, ampC: e.memory.ampC * g, ampL: e.memory.ampL * g, floor: t.noise * g * g}
-	if sm := e.sm; sm.sigma > spreadLeast && sm.steady < 0.97 {
-		x.smear = sm.sigma / math.Sqrt(1-sm.steady)
-		x.haze = (1 - sm.steady) * x.ampC * x.ampC / (math.Sqrt(2*math.Pi) * x.smear)
+	if sm := e.sm; sm.sigma > spreadLeast && !(sm.steady > 0.97) {
+		steady := sm.steady
+		if math.IsNaN(steady) {
+			steady = 0.5
+		}
+		x.smear = sm.sigma / math.Sqrt(1-steady)
+		x.haze = (1 - steady) * x.ampC * x.ampC / (math.Sqrt(2*math.Pi) * x.smear)
 	}
 	if !e.merged && e.pair.best < 0 { // until now they were followed second by second
 		e.pair.seed(&e.tr[1-e.local], &e.tr[e.local])
@@ -88,7 +92,10 @@ func (e *twoTone) takeClose(y *fitted, b *band, mid, g float64) {
 	l.c += y.cl
 	c.amp, l.amp = cmplx.Abs(y.a)/g, cmplx.Abs(y.b)/g
 	c.uf, l.uf = y.uc, y.ul
-	c.phase, l.phase = 0, y.beatTurns(mid)
+	at := b.oscillator(y.mid) + frac1((e.slow.centre-b.centre)*y.mid) + frac1((y.centre-e.slow.centre)*y.mid)
+	d := mid - y.mid
+	c.phase = at + cphase(y.a) + (y.centre+y.fc)*d + y.c*d*d/2
+	l.phase = at + cphase(y.b) + (y.centre+y.fl)*d + (y.c+y.cl)*d*d/2
 	if _, u := e.anchor.when(y.mid); y.own < u || !e.anchor.known {
 		e.anchor.set(y.mid, y.carrier(y.mid), math.Hypot(y.own, e.anchor.scatter/math.Sqrt(y.span)), y.c, max(y.ownC, 1e-6))
 	}

@@ -131,7 +131,7 @@ func (e *twoTone) noiseBeside(ln *lens, b *band, f, mid float64) float64 {
 
 // isSpread reports whether the carrier is too wide to be followed as a line.
 func (e *twoTone) isSpread() bool {
-	return e.local >= 0 && (e.hidden || e.held() > 0) && e.sm.sigma > wideSpread && e.sm.slowly > 0 && e.sm.steady < 0.5
+	return e.local >= 0 && (e.hidden || e.held() > 0) && e.sm.sigma > wideSpread && e.sm.slowly > 0 && !(e.sm.steady >= 0.5)
 }
 
 // followSpread finds the local's line in the carrier's smear and measures the

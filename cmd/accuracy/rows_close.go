@@ -107,7 +107,15 @@ func closeRows() []row {
 		s.sim.SecondPulses, s.sim.Tones, s.sim.Subcarrier, s.sim.Speech = true, true, true, true
 	}
 	drift := func(r *rand.Rand, s *scene) { s.sim.ReceiverDrift = 0.3 * either(r) }
-	rice := func(s *scene) { s.fade(0.1, 0); s.sim.RiceK = 4 }
+	// A fading carrier is heard for a good minute first: before that nobody can
+	// know how much of it stands still.
+	rice := func(s *scene) {
+		s.fade(0.1, 0)
+		s.sim.RiceK = 4
+		s.sim.Trims[0].At += 60
+		s.sim.Duration += 60
+		s.from += 60
+	}
 	add("close, gain control", seps, false, func(r *rand.Rand, s *scene) { level(r, s); agc(s) })
 	add("close, programme", seps, false, func(r *rand.Rand, s *scene) { level(r, s); programme(s) })
 	add("close, drift 0.3 Hz/min", seps, false, func(r *rand.Rand, s *scene) { level(r, s); drift(r, s) })
