@@ -41,10 +41,11 @@ func (p *played) swapped(i int) bool {
 }
 
 // mistaken says that reading i claims a wrong identity: tones swapped, or a
-// sign against the beat as sent and as received, where that exceeds 1 Hz.
+// sign against the beat as sent and as received, where that exceeds 1 Hz and
+// both tones are there: a claim about tones that are not is judged elsewhere.
 func (p *played) mistaken(i int) bool {
 	r, t := &p.readings[i], p.truthAt(i)
-	if !(math.Abs(t.Beat) > 1) {
+	if !t.Carrier || !t.Local || !(math.Abs(t.Beat) > 1) {
 		return false
 	}
 	return r.Beat*t.Beat < 0 && r.Beat*t.Received < 0 || r.State == dsp.Apart && p.swapped(i)
