@@ -84,9 +84,7 @@ type pairFitter struct {
 	prior prior
 	m     [pairCols][pairCols]float64
 	rhs   [pairCols]float64
-	inv   [pairCols][pairCols]float64
 	low   [pairCols][pairCols]float64
-	cols  [pairCols]int
 	n     int
 	r     []complex128
 	rss   float64 // with the prior's part
@@ -245,7 +243,6 @@ func (p *pairFitter) moved(st *stretch, x two, d *[pairCols]float64, free int) t
 	}
 	if free&freeSlope != 0 {
 		x.g += d[at] / st.half
-		at++
 	}
 	return x
 }

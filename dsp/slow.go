@@ -28,8 +28,6 @@ type slow struct {
 	z      []complex128
 	ok     []bool
 	next   int64
-	in     []complex128 // scratch
-	inOK   []bool
 }
 
 func newSlow(p *plan) *slow {
@@ -116,37 +114,6 @@ func (s *slow) put(y complex128, ok bool) {
 	}
 	s.z[i], s.ok[i] = y, ok
 	s.next++
-}
-
-// open loads the samples of mid +- span/2 into win under weights that taper as
-// half a cosine over the given share of the span at each end (0.5: Hann), and
-// returns the share of the weight that rests on real samples.
-func (s *slow) open(win *window, mid, span, taper float64) float64 {
-	m0 := int64(math.Ceil((mid - span/2) * s.rate))
-	m1 := int64(math.Floor((mid + span/2) * s.rate))
-	win.z, win.ok, win.w = win.z[:0], win.ok[:0], win.w[:0]
-	win.dt, win.half = 1/s.rate, span/2
-	win.t0 = s.time(m0) - mid
-	var sum, all float64
-	for m := m0; m <= m1; m++ {
-		i := m & int64(len(s.z)-1)
-		have := m >= 0 && m < s.next && m >= s.next-int64(len(s.z)) && s.ok[i]
-		w := 1.0
-		if e := span/2 - math.Abs(s.time(m)-mid); taper > 0 && e < taper*span {
-			w = 0.5 - 0.5*math.Cos(math.Pi*max(0, e)/(taper*span))
-		}
-		all += w
-		var z complex128
-		if have {
-			z = s.z[i]
-		} else {
-			w = 0
-		}
-		sum += w
-		win.z, win.ok, win.w = append(win.z, z), append(win.ok, have), append(win.w, w)
-	}
-	win.used = sum * win.dt
-	return sum / max(all, 1e-9)
 }
 
 // upto returns the time up to which samples have been made, s.

@@ -122,7 +122,7 @@ func (s *smear) find(b *band, x *seek) bool {
 	}
 	// In the middle of the smear only a line that rests can be told from its tops.
 	inside := math.Abs(best.m.when(x.end)-x.haze.mu) < 2.5*x.haze.sigma
-	if best.span == 0 || inside && (best.span < 8 || math.IsNaN(s.steady)) {
+	if best.span == 0 || inside && (best.span < 8 || !(s.steady < 0.4 || math.IsNaN(s.steady) && s.sigma > 0.15)) {
 		s.span = 0
 		return false
 	}

@@ -146,7 +146,7 @@ func (s *smear) at(w *window, f float64) complex128 {
 // note puts the second's phasors into the ring, or nothing for nil, and
 // estimates the width from it.
 func (s *smear) note(w *window, mid float64) {
-	if s.turns {
+	if s.turns || !s.clear() && !math.IsNaN(s.sigma) {
 		w = nil
 	}
 	if w != nil && s.power > 0 {
@@ -187,6 +187,15 @@ func (s *smear) note(w *window, mid float64) {
 	}
 }
 
+// clear reports whether the carrier is far enough from the local for what it is
+// like to be learnt: closer in, each is mistaken for a part of the other.
+func (s *smear) clear() bool {
+	if math.IsNaN(s.sigma) {
+		return true
+	}
+	return math.Abs(s.mean) > 1.5
+}
+
 // partial reports whether the carrier was there in a part of the second only:
 // its first or last tenths hold nothing but noise while the rest is strong.
 func (s *smear) partial(noise float64) bool {
@@ -201,7 +210,7 @@ func (s *smear) partial(noise float64) bool {
 		return false
 	}
 	weak := func(v float64) bool { return v < 4*noise && v < 0.1*sum }
-	return weak(p[0]) && weak(p[1]) || weak(p[phasorRate-1]) && weak(p[phasorRate-2])
+	return weak(p[0]) || weak(p[phasorRate-1])
 }
 
 // turnRing changes the frequency by which the ring is turned back.

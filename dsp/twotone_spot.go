@@ -66,7 +66,7 @@ func (e *twoTone) spot(mid float64) bool {
 		// Of a pair that was known the carrier must have been a smeared one, and
 		// the line must be as loud as the local was.
 		level := 20 * math.Log10(math.Sqrt(a2)/m.ampL)
-		if !(e.sm.sigma > wideSpread) || math.Abs(level) > 6 {
+		if !(e.sm.sigma > wideSpread) || e.sm.steady > 0.4 || math.Abs(level) > 6 {
 			return false
 		}
 	}

@@ -41,6 +41,11 @@ func (e *twoTone) fade(mid float64) {
 		c.f, _ = e.anchor.when(mid)
 	}
 	e.lookBeside(c, mid)
+	if gone && math.IsNaN(e.sm.beat) && !(e.sm.sigma > 0.03) {
+		// It went away: what its coming and going looks like is no fading.
+		e.sm.sigma = math.NaN()
+		e.sm.ring = [len(e.sm.ring)]complex128{}
+	}
 	if gone && !math.IsNaN(e.sm.beat) && e.sm.power > 8*e.sm.powerU {
 		c.live, c.tail, c.whole, c.at = true, true, false, mid
 		c.f = l.f + e.sm.beat
@@ -103,10 +108,10 @@ func (e *twoTone) lookBeside(c *track, mid float64) {
 	}
 	g := b.gain(e.sm.loc.f + want - b.centre)
 	a2 := e.sm.loc.amp * e.sm.loc.amp
-	if w := e.sm.width(n0 / (g * g) * phasorRate / a2); !math.IsNaN(w) && !e.sm.turns {
+	if w := e.sm.width(n0 / (g * g) * phasorRate / a2); !math.IsNaN(w) && !e.sm.turns && e.sm.clear() {
 		e.sm.sigma = w
 	}
-	if e.sm.n%(5*phasorRate) == 0 {
+	if e.sm.n%(5*phasorRate) == 0 && e.sm.clear() {
 		e.sm.steady = e.sm.inOneLine(n0 / (g * g) * phasorRate / a2)
 	}
 }

@@ -24,9 +24,7 @@ type whitener struct {
 	n       int
 	err     float64 // power of what is let through
 	v       []complex128
-	u       []complex128
 	dt      float64
-	first   int
 	stretch *stretch
 }
 
