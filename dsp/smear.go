@@ -211,6 +211,17 @@ func (s *smear) try(b *band, span, turn float64, x *seek) (hit, bool) {
 	return out, true
 }
 
+// needs returns for how long a local of the given level has to rest in the middle
+// of the smear for its line to stand twenty times above it, s.
+func (s *smear) needs(amp float64) float64 {
+	dense := s.slowly / (math.Sqrt(2*math.Pi) * max(s.sigma, 1e-3))
+	t := 8.0
+	for t < 300 && t*amp*amp < 20*dense {
+		t *= 1.25
+	}
+	return math.Ceil(t/10) * 10
+}
+
 // moving keeps account of whether the local is being turned.
 func (s *smear) moving(turns bool) {
 	s.still++

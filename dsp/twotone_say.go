@@ -124,7 +124,10 @@ func (e *twoTone) reading(mid float64) Reading {
 		r.Why = "no tone stands out of the noise"
 	case e.merged:
 		r.State = Merged
-		r.Why = "the tones are closer than one second can tell apart"
+		r.Why = "the tones are closer than the sound at rest so far can tell apart"
+		if e.hidden {
+			r.Why = fmt.Sprintf("the local is somewhere in the carrier's smear: needs about %.0f s at rest", e.sm.needs(e.memory.ampL))
+		}
 	case held == 1:
 		e.sayLone(&r, scale)
 	default:

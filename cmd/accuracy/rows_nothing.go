@@ -36,7 +36,7 @@ func ringing(lo, hi float64) clutter {
 			return
 		}
 		s.fade(min(15, w/fwhm), max(0, w-15*fwhm))
-		s.sim.CarrierDBFS, s.sim.CarrierCN0 = -60, 90 // the path's power; hardly any other noise
+		s.sim.CarrierDBFS, s.sim.CarrierCN0 = -60, 50+10*math.Log10(w) // the path's power; the filter stops 50 dB
 		line := s.sim.CarrierDBFS - 10*math.Log10(w) + cn0
 		s.sim.LocalDBFS = line
 		if carrier { // steady in it: the path's steady part
