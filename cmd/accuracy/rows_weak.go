@@ -38,20 +38,27 @@ func judgeWeak(all []played, given float64) []figure {
 // awayFrom and awayTo are when one of the tones is not there, s.
 const awayFrom, awayTo = 60.0, 120.0
 
+// absence returns the seconds with a beat while one of the tones is away, the
+// first three not counted, and how long it takes until there is one again.
+func (p *played) absence() (meanwhile int, wait float64) {
+	wait = math.Inf(1)
+	for _, r := range p.readings {
+		switch known := !math.IsNaN(r.Beat); {
+		case known && r.T > awayFrom+3 && r.T < awayTo:
+			meanwhile++
+		case known && r.T > awayTo:
+			wait = min(wait, r.T+0.5-awayTo)
+		}
+	}
+	return meanwhile, wait
+}
+
 func judgeAway(all []played) []figure {
 	var e, waits errs
 	meanwhile, scenes, back := 0, 0, 0
 	for i := range all {
 		p := &all[i]
-		n, found := 0, math.Inf(1)
-		for _, r := range p.readings {
-			switch known := !math.IsNaN(r.Beat); {
-			case known && r.T > awayFrom+3 && r.T < awayTo:
-				n++
-			case known && r.T > awayTo:
-				found = min(found, r.T+0.5-awayTo)
-			}
-		}
+		n, found := p.absence()
 		meanwhile += n
 		if n > 0 {
 			scenes++
@@ -122,11 +129,10 @@ func weakRows() []row {
 				},
 				judge: judgeAway,
 				worse: func(p *played) float64 {
-					v := meanOff(p)
-					for _, r := range p.readings {
-						if !math.IsNaN(r.Beat) && r.T > awayFrom+3 && r.T < awayTo {
-							v += 100
-						}
+					n, wait := p.absence()
+					v := meanOff(p) + 100*float64(n)
+					if wait > 10 {
+						v += 50
 					}
 					return v
 				}})
