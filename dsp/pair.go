@@ -169,7 +169,35 @@ func (p *pair) settle(k int, span float64, t two, cl float64, x *expect) {
 			y = z
 		}
 	}
+	if !y.ok && span >= 4 && x.smear == 0 {
+		y = p.blindly(span, t, x)
+	}
 	p.sol[k] = y
+}
+
+// blindly fits the phase of the sound alone, as a gain control leaves nothing
+// else: with two close tones it follows their envelope. To first order that
+// makes both sides of the stronger tone alike, so the other side is tried too,
+// and what is not plainly worse there does not count.
+func (p *pair) blindly(span float64, t two, x *expect) fitted {
+	p.fit.blind = true
+	defer func() { p.fit.blind = false }()
+	t.cl = 0
+	y, rss := p.try(span, t, freeChirp, x)
+	m := t
+	if cmplx.Abs(t.a) > cmplx.Abs(t.b) {
+		m.fl = 2*t.fc - t.fl
+	} else {
+		m.fc = 2*t.fl - t.fc
+	}
+	z, other := p.try(span, m, freeChirp, x)
+	if other < rss {
+		y, z, rss, other = z, y, other, rss
+	}
+	if !y.ok || other-rss < 12*max(y.noise, x.floor)/p.st.dt {
+		y.ok = false
+	}
+	return y
 }
 
 // try runs the fit from t; ok tells whether it stands up. It also returns the

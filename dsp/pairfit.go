@@ -82,6 +82,7 @@ const pairCols = 9
 // the joint bound that this reaches. It allocates nothing in the steady state.
 type pairFitter struct {
 	prior prior
+	blind bool // to size: a gain control has been at it, only the phase of the sound counts
 	m     [pairCols][pairCols]float64
 	rhs   [pairCols]float64
 	low   [pairCols][pairCols]float64
@@ -154,7 +155,9 @@ func (p *pairFitter) normal(st *stretch, x *two, free int) {
 		}
 		p.r[i] = r
 		if st.w[i] != 0 {
-			p.rss += real(r)*real(r) + imag(r)*imag(r)
+			if !p.blind {
+				p.rss += real(r)*real(r) + imag(r)*imag(r)
+			}
 			grow := e1 * complex(1+x.g*t, 0)
 			col[0], col[1] = grow, grow*1i
 			col[2] = shaped * complex(0, u)
@@ -169,11 +172,15 @@ func (p *pairFitter) normal(st *stretch, x *two, free int) {
 			if gi >= 0 {
 				col[gi] = ca * complex(u, 0)
 			}
-			for j := range n {
-				a, b := real(col[j]), imag(col[j])
-				p.rhs[j] += a*real(r) + b*imag(r)
-				for k := 0; k <= j; k++ {
-					p.m[j][k] += a*real(col[k]) + b*imag(col[k])
+			if p.blind {
+				p.addBlind(i, z, shaped+lb, &col)
+			} else {
+				for j := range n {
+					a, b := real(col[j]), imag(col[j])
+					p.rhs[j] += a*real(r) + b*imag(r)
+					for k := 0; k <= j; k++ {
+						p.m[j][k] += a*real(col[k]) + b*imag(col[k])
+					}
 				}
 			}
 		}
@@ -182,8 +189,46 @@ func (p *pairFitter) normal(st *stretch, x *two, free int) {
 		e2 *= q2
 		q2 *= s2
 	}
+	if p.blind {
+		p.holdScale(x)
+	}
 	p.data = p.rss
 	p.weigh(st, x, free)
+}
+
+// addBlind adds sample z to the normal equations where its size is some unknown
+// gain: what counts is its part at right angles to the model m.
+func (p *pairFitter) addBlind(i int, z, m complex128, col *[pairCols]complex128) {
+	size := cmplx.Abs(m)
+	if size == 0 {
+		p.r[i] = 0
+		return
+	}
+	unit := m / complex(size, 0)
+	q := z * cmplx.Conj(unit)
+	gain := real(q) / size
+	p.r[i] = complex(0, imag(q)) * unit
+	p.rss += imag(q) * imag(q)
+	var y [pairCols]float64
+	for j := range p.n {
+		y[j] = gain * imag(col[j]*cmplx.Conj(unit))
+		p.rhs[j] += y[j] * imag(q)
+		for k := 0; k <= j; k++ {
+			p.m[j][k] += y[j] * y[k]
+		}
+	}
+}
+
+// holdScale keeps the carrier's amplitude where it is: of both together the
+// phase of the sound knows only the ratio.
+func (p *pairFitter) holdScale(x *two) {
+	a := [2]float64{real(x.a), imag(x.a)}
+	w := 1e3 * (p.m[0][0] + p.m[1][1] + p.m[3][3]) / (a[0]*a[0] + a[1]*a[1])
+	for j := range 2 {
+		for k := 0; k <= j; k++ {
+			p.m[j][k] += w * a[j] * a[k]
+		}
+	}
 }
 
 // factor makes the Cholesky factor of the normal matrix with its diagonal
@@ -374,6 +419,9 @@ func (p *pairFitter) chirpError(st *stretch, density float64) float64 {
 // not explain gathers.
 func (p *pairFitter) leftOver(st *stretch, x *two) (all, beside float64) {
 	all = p.data / (float64(len(p.r)) - float64(p.n)/2) * st.dt / max(st.valid, 0.1)
+	if p.blind {
+		all *= 2 // only one of two quadratures was counted
+	}
 	step := 0.5 / st.half // one resolution
 	n := 0.0
 	for _, f := range [2]float64{x.fc, x.fl} {
@@ -386,7 +434,11 @@ func (p *pairFitter) leftOver(st *stretch, x *two) (all, beside float64) {
 			n++
 		}
 	}
-	return all, beside / max(n, 1)
+	beside /= max(n, 1)
+	if p.blind {
+		beside *= 2
+	}
+	return all, beside
 }
 
 // recent returns the mean power of the residual in the last seconds of the
