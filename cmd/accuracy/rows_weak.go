@@ -55,10 +55,11 @@ func (p *played) absence() (meanwhile int, wait float64) {
 
 func judgeAway(all []played) []figure {
 	var e, waits errs
-	meanwhile, scenes, back := 0, 0, 0
+	meanwhile, scenes, back, wrong := 0, 0, 0, 0
 	for i := range all {
 		p := &all[i]
 		n, found := p.absence()
+		wrong += p.mistakes()
 		meanwhile += n
 		if n > 0 {
 			scenes++
@@ -72,6 +73,7 @@ func judgeAway(all []played) []figure {
 	return []figure{
 		most("seconds with a beat meanwhile, after 3 s", float64(meanwhile), 0, ""),
 		told("such scenes", float64(scenes), ""),
+		most("seconds with a wrong identity", float64(wrong), 0, ""),
 		least("back within 10 s", percent(back, len(all)), 100, "%"),
 		told("median wait", median(waits.d), "s"),
 		least("means given", percent(e.n(), len(all)), 100, "%"),
@@ -130,7 +132,7 @@ func weakRows() []row {
 				judge: judgeAway,
 				worse: func(p *played) float64 {
 					n, wait := p.absence()
-					v := meanOff(p) + 100*float64(n)
+					v := meanOff(p) + 100*float64(n+p.mistakes())
 					if wait > 10 {
 						v += 50
 					}
