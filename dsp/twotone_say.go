@@ -175,7 +175,9 @@ func (e *twoTone) sayBoth(r *Reading, mid, scale float64) {
 		e.sayTone(b, &r.LocalTone, &r.LocalDBFS, &r.LocalCN0, scale)
 		r.Why = ""
 		why, proven := a.ev.carrierLike(&b.ev)
-		if !proven && e.sm.sigma >= 2*spreadLeast {
+		// Noise through a narrow filter looks like a carrier that is smeared more
+		// widely than ordinary paths do.
+		if !proven && e.sm.sigma >= 2*spreadLeast && e.sm.sigma < 0.8 {
 			why, proven = "its tone is smeared by Doppler, the other stands still", true
 		}
 		if proven {
