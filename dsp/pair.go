@@ -169,7 +169,7 @@ func (p *pair) settle(k int, span float64, t two, cl float64, x *expect) {
 			y = z
 		}
 	}
-	if !y.ok && span >= 4 && x.smear == 0 {
+	if !y.ok && span >= 8 && x.smear == 0 {
 		y = p.blindly(span, t, x)
 	}
 	p.sol[k] = y
@@ -228,7 +228,9 @@ func (p *pair) try(span float64, t two, free int, x *expect) (fitted, float64) {
 	y.uchirp = p.fit.chirpError(&p.st, n)
 	y.level = p.fit.levelError(&p.st, &t, n)
 	data := p.fit.data
-	y.ok = p.stands(&y, x) && !(math.Abs(t.fc-pr.fc) > 6*math.Hypot(pr.ufc, y.uc))
+	// A carrier elsewhere than foretold, or one that bends otherwise than the
+	// receiver drifts, is some other line: a local that turns, for one.
+	y.ok = p.stands(&y, x) && !(math.Abs(t.fc-pr.fc) > 6*math.Hypot(pr.ufc, y.uc)) && !(math.Abs(t.c-pr.c) > 6*math.Hypot(pr.uc, y.uchirp))
 	y.own, y.ownC = math.Inf(1), math.Inf(1)
 	if y.ok && p.fit.alone(&p.st, &t, free) {
 		_, y.own, _ = p.fit.errors(&p.st, n)

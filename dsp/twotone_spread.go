@@ -134,9 +134,17 @@ func (e *twoTone) noiseBeside(ln *lens, b *band, f, mid float64) float64 {
 	return n0
 }
 
-// isSpread reports whether the carrier is too wide to be followed as a line.
+// isSpread reports whether the carrier is too wide to be followed as a line. How
+// much of it stands still takes half a minute to know: until then only a wide
+// one is taken for a smear.
 func (e *twoTone) isSpread() bool {
-	return e.local >= 0 && (e.hidden || e.held() > 0) && e.sm.sigma > wideSpread && e.sm.slowly > 0 && !(e.sm.steady >= 0.5)
+	if e.local < 0 || !e.hidden && e.held() == 0 || !(e.sm.slowly > 0) {
+		return false
+	}
+	if math.IsNaN(e.sm.steady) {
+		return e.sm.sigma > 2.5*wideSpread
+	}
+	return e.sm.sigma > wideSpread && e.sm.steady < 0.5
 }
 
 // followSpread finds the local's line in the carrier's smear and measures the
