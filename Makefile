@@ -44,7 +44,7 @@ bench: build need-test ## the figures: accuracy against the bounds, speed, memor
 	CGO_ENABLED=$(CGO) $(GO) test $(TAGS) -run '^$$' -bench . -benchmem ./dsp ./capture/...
 	OFFBEAT_LONG=1 CGO_ENABLED=$(CGO) $(GO) test $(TAGS) -timeout 30m -count=1 -v -run 'TestSpeed|TestLoad|TestMemory' ./cmd/offbeat
 
-bench-accuracy: ## every accuracy figure beside its limit (about an hour)
+bench-accuracy: ## every accuracy figure beside its limit (hours)
 	CGO_ENABLED=0 $(GO) run ./cmd/accuracy --scenes 200
 
 need-sound:

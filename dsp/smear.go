@@ -55,10 +55,11 @@ type smear struct {
 	steady float64 // share of the carrier's power in one line, 0 to 1; NaN: not known
 	slowly float64 // power of the carrier over some twenty seconds
 
-	ring [phasorRate * phasorSpan]complex128 // of the carrier by the local, turned back by ref*t; 0: none
-	n    int64                               // number of the next one
-	ref  float64
-	dft  []complex128
+	ring   [phasorRate * phasorSpan]complex128 // of the carrier by the local, turned back by ref*t; 0: none
+	n      int64                               // number of the next one
+	ref    float64
+	dft    []complex128
+	shaded []complex128 // dft under the window's weights
 }
 
 func newSmear(s *slow) *smear {

@@ -16,6 +16,7 @@ func (s *smear) look(l *lens, b *band, mid, want, n0 float64) {
 		return
 	}
 	s.frame(w, b, mid)
+	s.shade(w)
 	reach := 4.0
 	if !math.IsNaN(s.sigma) {
 		reach = min(12, 3+4*s.sigma)
@@ -116,7 +117,7 @@ func (s *smear) moments(w *window, centre, reach, n0 float64) moments {
 	m.power = p0 * step
 	m.powerU = math.Sqrt(v0) * step
 	m.mean = centre + mean*step
-	m.u = math.Sqrt(max(0, v1-2*mean*0+v0*mean*mean)) / p0 * step
+	m.u = math.Sqrt(v1+v0*mean*mean) / p0 * step
 	return m
 }
 
@@ -130,21 +131,28 @@ func (s *smear) back() float64 {
 	return s.slowly / (math.Sqrt(2*math.Pi) * s.sigma) * math.Exp(-d*d/2) * s.lever
 }
 
-// at returns the Fourier sum of s.dft under the square root of the weights: so
-// that seconds that overlap count everything once.
+// shade leaves s.dft under the square root of the weights, so that seconds that
+// overlap count everything once, in s.shaded.
+func (s *smear) shade(w *window) {
+	s.shaded = resize(s.shaded, len(s.dft))
+	for i, v := range s.dft {
+		s.shaded[i] = v * complex(math.Sqrt(w.w[i]), 0)
+	}
+}
+
+// at returns the Fourier sum of s.shaded.
 func (s *smear) at(w *window, f float64) complex128 {
 	var y complex128
 	e := cmplx.Rect(1, -2*math.Pi*f*w.t0)
 	q := cmplx.Rect(1, -2*math.Pi*f*w.dt)
-	for i, v := range s.dft {
-		y += v * e * complex(math.Sqrt(w.w[i]), 0)
+	for _, v := range s.shaded {
+		y += v * e
 		e *= q
 	}
 	return y
 }
 
-// note puts the second's phasors into the ring, or nothing for nil, and
-// estimates the width from it.
+// note puts the second's phasors into the ring, or nothing for nil.
 func (s *smear) note(w *window, mid float64) {
 	if s.turns || !s.clear() && !math.IsNaN(s.sigma) {
 		w = nil

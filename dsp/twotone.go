@@ -57,9 +57,8 @@ type twoTone struct {
 	closest  *fitted // what the joint fit of close tones says in this second, nil: nothing
 	spotted  int     // how often in a row a line was seen to stand still beside a smear, and where
 	spotAt   float64
-	why      string // what settled which tone is which
-	hidden   bool   // the local's line is somewhere in the smear
-	hits     int    // how often in a row it was found there again, and where
+	hidden   bool // the local's line is somewhere in the smear
+	hits     int  // how often in a row it was found there again, and where
 	hitAt    float64
 	lostLine int // seconds for which the local's line has not been found in the smear
 	dim      int // seconds in a row without the carrier's power beside the local

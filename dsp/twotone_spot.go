@@ -120,5 +120,4 @@ func (e *twoTone) settle(b *band, mid, line, carrier, amp, power, width, n0 floa
 	e.sm.loc = model{at: mid, f: line, amp: l.amp}
 	e.sm.span = 4
 	e.sm.sigma, e.sm.slowly, e.sm.mean = width, power, carrier-line
-	e.why = "the other tone is smeared by Doppler, this one stands still"
 }

@@ -94,7 +94,7 @@ func (e *twoTone) lookBeside(c *track, mid float64) {
 	if e.sm.slowly > 0 {
 		want = e.sm.mean
 	}
-	n0 := e.noiseBeside(ln, b, e.sm.loc.f+want, mid)
+	n0 := e.noiseBeside(ln, b, e.sm.loc.f+want)
 	e.sm.look(ln, b, mid, want, n0)
 	if !math.IsNaN(e.sm.beat) {
 		w := 0.1
@@ -118,8 +118,7 @@ func (e *twoTone) lookBeside(c *track, mid float64) {
 
 // noiseBeside returns the density of the noise around f, with both tones and
 // their skirts left out.
-func (e *twoTone) noiseBeside(ln *lens, b *band, f, mid float64) float64 {
-	e.sm.frame(&ln.win, b, mid)
+func (e *twoTone) noiseBeside(ln *lens, b *band, f float64) float64 {
 	guard := 5.0
 	if !math.IsNaN(e.sm.sigma) {
 		guard += 4 * e.sm.sigma
