@@ -53,6 +53,7 @@ type twoTone struct {
 	sm       *smear
 	pair     *pair
 	anchor   anchor
+	belief   belief
 	sure     bool    // which of two close tones is which
 	closest  *fitted // what the joint fit of close tones says in this second, nil: nothing
 	spotted  int     // how often in a row a line was seen to stand still beside a smear, and where
@@ -370,13 +371,11 @@ func (e *twoTone) unmerge(mid float64, k int) {
 	e.jumped = true
 	a, b := &e.tr[0], &e.tr[1]
 	e.local = -1
-	m := &e.memory
-	m.crossed = true // the tones may have passed through each other
-	switch lean := e.leaning([2]float64{a.f, b.f}, [2]float64{a.amp, b.amp}, mid, math.Hypot(a.uf, b.uf), 0); {
-	case lean > sureEnough:
-		e.local = 1
-	case lean < -sureEnough:
-		e.local = 0
+	e.memory.crossed = true // the tones may have passed through each other
+	// What either track was before is another tone's.
+	a.ev, b.ev, a.jit, b.jit = evidence{}, evidence{}, jitter{}, jitter{}
+	if e.memory.known {
+		e.belief.begin(e.anchor, mid)
 	}
 }
 

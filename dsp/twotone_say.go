@@ -13,7 +13,10 @@ func (e *twoTone) identify(mid float64) {
 		if !a.whole || !b.whole {
 			return
 		}
-		if e.local < 0 {
+		switch {
+		case e.belief.on:
+			e.weigh(mid)
+		case e.local < 0:
 			e.local = e.whichIsLocal(mid)
 		}
 		if e.local >= 0 && e.isSpread() {

@@ -1,0 +1,148 @@
+package dsp
+
+import "math"
+
+const (
+	beliefSeconds = 40   // for how long after the tones parted the sum is kept open
+	carrierSlack  = 0.02 // Hz: what gain control and programme do to a second's carrier
+	localSlack    = 0.03 // Hz: how unevenly a hand turns a trimmer from second to second
+	levelSay      = 4.0  // log-odds that levels alone may give
+	provenSay     = 8.0  // and a carrier's own marks: sidebands in pairs, fading
+)
+
+// belief sums up, second by second after two tones parted that may have passed
+// through each other, which of them is the carrier. Either way round has its
+// own prediction of the carrier, going on from where the carrier was known,
+// and of the local, which may be turned but not unevenly; what each second
+// shows counts by Student's density of three degrees of freedom, so that no
+// second settles it against all others.
+type belief struct {
+	on     bool
+	since  float64    // s
+	n      int        // seconds added
+	odds   float64    // log-odds for track 0 being the carrier and track 1 the local, by motion
+	ratio  float64    // mean level of track 0 over that of track 1, dB
+	c      [2]anchor  // the carrier's path if it is track k
+	f      [2]float64 // where track k was
+	slope  [2]float64 // how it moved, Hz/s
+	at     [2]float64 // when
+	points [2]int     // seconds in a row that showed it
+}
+
+// student returns the log of Student's density of three degrees of freedom, but
+// for a constant.
+func student(d, scale float64) float64 {
+	x := d / scale
+	return -math.Log(scale) - 2*math.Log1p(x*x/3)
+}
+
+// begin starts the sum from what is known of the carrier.
+func (b *belief) begin(a anchor, mid float64) {
+	*b = belief{on: true, since: mid, c: [2]anchor{a, a}}
+}
+
+// asCarrier returns the log-density of tone k at f, were it the carrier.
+func (b *belief) asCarrier(k int, mid, f, u float64) float64 {
+	a := &b.c[k]
+	want, v := a.when(mid)
+	l := student(f-want, math.Sqrt(v*v+u*u+a.scatter*a.scatter+carrierSlack*carrierSlack))
+	scatter := a.scatter // it was learned where the carrier was known
+	a.add(mid, f, math.Hypot(u, carrierSlack))
+	a.scatter = scatter
+	return l
+}
+
+// asLocal returns the log-density of tone k at f, were it the local.
+func (b *belief) asLocal(k int, mid, f, u float64) float64 {
+	dt := mid - b.at[k]
+	if b.points[k] == 0 || dt > 3 {
+		b.points[k] = 0
+		return student(0, 3) // it may be anywhere about the carrier
+	}
+	if b.points[k] == 1 {
+		return student(f-b.f[k]-b.c[k].slope*dt, math.Hypot(0.3*dt, u))
+	}
+	return student(f-b.f[k]-b.slope[k]*dt, math.Hypot(localSlack*dt, 3*u))
+}
+
+// add takes in the second around mid. A tone that was not there from end to end
+// says nothing.
+func (b *belief) add(tr *[2]track, mid float64) {
+	for k := range tr {
+		t := &tr[k]
+		if !t.live || !t.whole || t.at != mid {
+			continue
+		}
+		d := b.asCarrier(k, mid, t.f, t.uf) - b.asLocal(k, mid, t.f, t.uf)
+		if k == 1 {
+			d = -d
+		}
+		b.odds += max(-10, min(10, d))
+		if b.points[k] > 0 {
+			b.slope[k] = (t.f - b.f[k]) / (mid - b.at[k])
+		}
+		b.f[k], b.at[k] = t.f, mid
+		b.points[k]++
+	}
+	if tr[0].whole && tr[1].whole && tr[0].at == mid && tr[1].at == mid {
+		b.n++
+		b.ratio += (20*math.Log10(tr[0].amp/tr[1].amp) - b.ratio) / float64(b.n)
+	}
+}
+
+// weigh adds the second around mid to the belief in who is who, and changes the
+// tones' names when it says so: it takes them away on any doubt and gives them
+// only on certainty.
+func (e *twoTone) weigh(mid float64) {
+	b := &e.belief
+	if !b.on {
+		return
+	}
+	b.add(&e.tr, mid)
+	odds := e.odds()
+	switch {
+	case b.n == 0:
+	case e.local < 0 && odds > sureEnough:
+		e.local = 1
+	case e.local < 0 && odds < -sureEnough:
+		e.local = 0
+	case e.local == 1 && odds < 0, e.local == 0 && odds > 0:
+		e.local = -1
+		e.count.broken()
+		return
+	}
+	if e.local >= 0 {
+		e.anchor = b.c[1-e.local]
+		if mid-b.since > beliefSeconds {
+			b.on = false
+		}
+	}
+}
+
+// odds returns the log-odds for track 0 being the carrier: by motion, levels,
+// and the marks that only a carrier has.
+func (e *twoTone) odds() float64 {
+	b, m := &e.belief, &e.memory
+	sum := b.odds
+	if m.known && b.n > 0 {
+		most := levelSay
+		if e.sm.sigma > spreadLeast {
+			most = 1 // the level of a carrier that fades says little
+		}
+		was := 20 * math.Log10(m.ampC/m.ampL)
+		v := 4 + m.evC.varies
+		sum += max(-most, min(most, ((-b.ratio-was)*(-b.ratio-was)-(b.ratio-was)*(b.ratio-was))/(2*v)))
+	}
+	if _, proven := e.tr[0].ev.carrierLike(&e.tr[1].ev); proven && e.tr[0].ev.seconds >= 5 && e.tr[1].ev.seconds >= 5 {
+		sum += provenSay
+	} else if _, proven := e.tr[1].ev.carrierLike(&e.tr[0].ev); proven && e.tr[0].ev.seconds >= 5 && e.tr[1].ev.seconds >= 5 {
+		sum -= provenSay
+	}
+	switch e.byJitter() {
+	case 1:
+		sum += provenSay
+	case 0:
+		sum -= provenSay
+	}
+	return sum
+}
