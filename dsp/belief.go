@@ -1,6 +1,10 @@
 package dsp
 
-import "math"
+import (
+"math"
+"os"
+"fmt"
+)
 
 const (
 	beliefSeconds = 40   // for how long after the tones parted the sum is kept open
@@ -38,6 +42,10 @@ func student(d, scale float64) float64 {
 
 // begin starts the sum from what is known of the carrier.
 func (b *belief) begin(a anchor, mid float64) {
+	if dbg {
+		w,u := a.when(mid)
+		fmt.Println("BEGIN", mid, w,u, a.scatter, a.slope)
+	}
 	*b = belief{on: true, since: mid, c: [2]anchor{a, a}}
 }
 
@@ -90,6 +98,25 @@ func (b *belief) add(tr *[2]track, mid float64) {
 	}
 }
 
+// trust keeps the carrier's path while both tones are known and so far apart
+// that neither can be taken for the other.
+func (e *twoTone) trust() {
+	if e.local < 0 || e.merged || e.hidden || e.held() < 2 {
+		return
+	}
+	clear := 1.0
+	if e.sm.sigma > spreadLeast {
+		clear += 4 * e.sm.sigma
+	}
+	if math.Abs(e.tr[0].f-e.tr[1].f) < clear {
+		return
+	}
+	e.trusted = e.anchor
+	if e.sm.sigma > spreadLeast {
+		e.trusted.scatter = max(e.trusted.scatter, e.sm.sigma)
+	}
+}
+
 // weigh adds the second around mid to the belief in who is who, and changes the
 // tones' names when it says so: it takes them away on any doubt and gives them
 // only on certainty.
@@ -100,6 +127,12 @@ func (e *twoTone) weigh(mid float64) {
 	}
 	b.add(&e.tr, mid)
 	odds := e.odds()
+	if dbg {
+		w0,u0 := b.c[0].when(mid)
+		_, p0 := e.tr[0].ev.carrierLike(&e.tr[1].ev)
+		_, p1 := e.tr[1].ev.carrierLike(&e.tr[0].ev)
+		fmt.Printf("W %.1f odds %.2f total %.2f f %.3f %.3f whole %v %v ratio %.1f anchor %.3f %.3f sc %.3f sl %.4f proven %v %v jit %d local %d mirrored %.2f %.2f\n", mid, b.odds, odds, e.tr[0].f, e.tr[1].f, e.tr[0].whole, e.tr[1].whole, b.ratio, w0, u0, b.c[0].scatter, b.c[0].slope, p0,p1, e.byJitter(), e.local, e.tr[0].ev.mirrored, e.tr[1].ev.mirrored)
+	}
 	switch {
 	case b.n == 0:
 	case e.local < 0 && odds > sureEnough:
@@ -146,3 +179,7 @@ func (e *twoTone) odds() float64 {
 	}
 	return sum
 }
+
+func init() { dbg = os.Getenv("DBG") != "" }
+
+var dbg bool

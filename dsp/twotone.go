@@ -54,6 +54,7 @@ type twoTone struct {
 	pair     *pair
 	anchor   anchor
 	belief   belief
+	trusted  anchor  // the carrier's path as it was when the tones were last well apart and known
 	sure     bool    // which of two close tones is which
 	closest  *fitted // what the joint fit of close tones says in this second, nil: nothing
 	spotted  int     // how often in a row a line was seen to stand still beside a smear, and where
@@ -375,7 +376,7 @@ func (e *twoTone) unmerge(mid float64, k int) {
 	// What either track was before is another tone's.
 	a.ev, b.ev, a.jit, b.jit = evidence{}, evidence{}, jitter{}, jitter{}
 	if e.memory.known {
-		e.belief.begin(e.anchor, mid)
+		e.belief.begin(e.trusted, mid)
 	}
 }
 

@@ -19,6 +19,7 @@ func (e *twoTone) identify(mid float64) {
 		case e.local < 0:
 			e.local = e.whichIsLocal(mid)
 		}
+		defer e.trust()
 		if e.local >= 0 && e.isSpread() {
 			e.remember(mid)
 		} else if e.local >= 0 && math.Hypot(a.uf, b.uf) < 0.1 {

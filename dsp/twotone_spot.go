@@ -69,6 +69,13 @@ func (e *twoTone) spot(mid float64) bool {
 		if !(e.sm.sigma > wideSpread) || e.sm.steady > 0.4 || math.Abs(level) > 6 {
 			return false
 		}
+		// And what is spread must be where the carrier was headed: a local that
+		// turns looks smeared too, beside a carrier that stands still.
+		want, u := e.anchor.when(mid)
+		u = math.Sqrt(u*u + e.anchor.scatter*e.anchor.scatter + width*width + carrierSlack*carrierSlack)
+		if e.anchor.known && student(mean+st.centre-want, u)-student(f+st.centre-want, u) < 2 {
+			return false
+		}
 	}
 	if e.spotted == 0 || math.Abs(f+st.centre-e.spotAt) > 0.1 {
 		e.spotted = 0

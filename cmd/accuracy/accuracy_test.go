@@ -48,7 +48,7 @@ func TestRows(t *testing.T) {
 				}
 				return judge(all)
 			}
-			if _, n := w.run(seed, scenes, 1, false, io.Discard); n == 0 || judged != scenes {
+			if _, n := w.run(seed, scenes, 1, 0, false, io.Discard); n == 0 || judged != scenes {
 				t.Errorf("seed %d: %d figures of %d scenes", seed, n, judged)
 			}
 			if w.worse == nil {

@@ -2,7 +2,7 @@
 // known truth, differently seeded every time, to dsp.Bench and prints every
 // figure with its limit beside it.
 //
-//	accuracy [--scenes 200] [--rows REGEXP] [--seed N] [--workers 2]
+//	accuracy [--scenes 200] [--rows REGEXP] [--seed N] [--workers 2] [--only SEED] [-v]
 //
 // It exits with 1 when a figure misses its limit.
 package main
@@ -21,6 +21,7 @@ func main() {
 	rows := flag.String("rows", "", "only rows whose name matches")
 	seed := flag.Uint64("seed", 0, "of all scenes; 0: another one every time")
 	workers := flag.Int("workers", runtime.NumCPU(), "scenes at a time")
+	only := flag.Uint64("only", 0, "play only the scene of this Seed, as -v prints it")
 	verbose := flag.Bool("v", false, "print the worst scenes of every row")
 	flag.Parse()
 	which, err := regexp.Compile(*rows)
@@ -35,7 +36,7 @@ func main() {
 	missed, total := 0, 0
 	for _, r := range table() {
 		if which.MatchString(r.name) {
-			m, n := r.run(*seed, *scenes, *workers, *verbose, os.Stdout)
+			m, n := r.run(*seed, *scenes, *workers, *only, *verbose, os.Stdout)
 			missed += m
 			total += n
 		}

@@ -6,6 +6,7 @@ import (
 	"io"
 	"math"
 	"math/rand/v2"
+	"slices"
 	"sort"
 	"sync"
 	"time"
@@ -119,7 +120,7 @@ type row struct {
 
 // run plays a row and prints it; it returns the figures missed and how many
 // there were.
-func (w *row) run(seed uint64, scenes, workers int, verbose bool, out io.Writer) (missed, n int) {
+func (w *row) run(seed uint64, scenes, workers int, only uint64, verbose bool, out io.Writer) (missed, n int) {
 	if w.share > 0 {
 		scenes = max(1, int(w.share*float64(scenes)))
 	}
@@ -130,6 +131,12 @@ func (w *row) run(seed uint64, scenes, workers int, verbose bool, out io.Writer)
 		r := rand.New(rand.NewPCG(seed, h.Sum64()+uint64(i)))
 		list[i] = w.make(r)
 		list[i].sim.Seed = r.Uint64() | 1
+	}
+	if only != 0 {
+		list = slices.DeleteFunc(list, func(s scene) bool { return s.sim.Seed != only })
+		if len(list) == 0 {
+			return 0, 0
+		}
 	}
 	all, err := playAll(list, workers)
 	if err != nil {
