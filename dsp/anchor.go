@@ -13,12 +13,14 @@ type anchor struct {
 	p01, p11  float64
 	scatter   float64 // of the carrier about the foretold from second to second, beyond its own u, Hz
 	misses    int
+	n         int // seconds taken since it began
 }
 
 const (
-	driftWalk  = 3e-5 // how the drift wanders, Hz/s per square root of a second
-	driftShare = 0.01 // the same by its size
-	firstDrift = 0.03 // what it may be at first, Hz/s
+	driftWalk   = 3e-5 // how the drift wanders, Hz/s per square root of a second
+	driftShare  = 0.01 // the same by its size
+	firstDrift  = 0.03 // what it may be at first, Hz/s
+	anchorKnown = 10   // seconds until scatter and drift are known
 )
 
 func (a *anchor) forget() { *a = anchor{} }
@@ -51,6 +53,7 @@ func (a *anchor) add(t, f, u float64) {
 	if d*d > 25*s {
 		return
 	}
+	a.n++
 	k0, k1 := a.p00/s, a.p01/s
 	a.hz += k0 * d
 	a.slope += k1 * d
@@ -78,10 +81,10 @@ func (a *anchor) advance(dt float64) {
 	a.p11 += q * dt
 }
 
-// set takes frequency and drift of a long fit for what they are.
-func (a *anchor) set(t, f, u, slope, us float64) {
+// set takes frequency and drift of a fit over span seconds for what they are.
+func (a *anchor) set(t, f, u, slope, us, span float64) {
 	s := a.scatter
-	*a = anchor{known: true, at: t, hz: f, slope: slope, p00: u * u, p11: us * us, scatter: s}
+	*a = anchor{known: true, at: t, hz: f, slope: slope, p00: u * u, p11: us * us, scatter: s, n: max(a.n, int(span))}
 }
 
 // when returns where the carrier is at time t, Hz, and how well that is known.

@@ -1,9 +1,9 @@
 package dsp
 
 import (
-"math"
-"os"
-"fmt"
+	"fmt"
+	"math"
+	"os"
 )
 
 const (
@@ -43,8 +43,8 @@ func student(d, scale float64) float64 {
 // begin starts the sum from what is known of the carrier.
 func (b *belief) begin(a anchor, mid float64) {
 	if dbg {
-		w,u := a.when(mid)
-		fmt.Println("BEGIN", mid, w,u, a.scatter, a.slope)
+		w, u := a.when(mid)
+		fmt.Println("BEGIN", mid, w, u, a.scatter, a.slope)
 	}
 	*b = belief{on: true, since: mid, c: [2]anchor{a, a}}
 }
@@ -111,10 +111,14 @@ func (e *twoTone) trust() {
 	if math.Abs(e.tr[0].f-e.tr[1].f) < clear {
 		return
 	}
-	e.trusted = e.anchor
+	a := e.anchor
 	if e.sm.sigma > spreadLeast {
-		e.trusted.scatter = max(e.trusted.scatter, e.sm.sigma)
+		a.scatter = max(a.scatter, e.sm.sigma)
 	}
+	if a.n < anchorKnown { // few seconds show neither how it fades nor how it drifts
+		a = anchor{known: true, at: a.at, hz: a.hz, p00: 0.1, p11: firstDrift * firstDrift, scatter: max(a.scatter, 0.3), n: a.n}
+	}
+	e.trusted = a
 }
 
 // weigh adds the second around mid to the belief in who is who, and changes the
@@ -128,10 +132,10 @@ func (e *twoTone) weigh(mid float64) {
 	b.add(&e.tr, mid)
 	odds := e.odds()
 	if dbg {
-		w0,u0 := b.c[0].when(mid)
+		w0, u0 := b.c[0].when(mid)
 		_, p0 := e.tr[0].ev.carrierLike(&e.tr[1].ev)
 		_, p1 := e.tr[1].ev.carrierLike(&e.tr[0].ev)
-		fmt.Printf("W %.1f odds %.2f total %.2f f %.3f %.3f whole %v %v ratio %.1f anchor %.3f %.3f sc %.3f sl %.4f proven %v %v jit %d local %d mirrored %.2f %.2f\n", mid, b.odds, odds, e.tr[0].f, e.tr[1].f, e.tr[0].whole, e.tr[1].whole, b.ratio, w0, u0, b.c[0].scatter, b.c[0].slope, p0,p1, e.byJitter(), e.local, e.tr[0].ev.mirrored, e.tr[1].ev.mirrored)
+		fmt.Printf("W %.1f odds %.2f total %.2f f %.3f %.3f whole %v %v ratio %.1f anchor %.3f %.3f sc %.3f sl %.4f proven %v %v jit %d local %d mirrored %.2f %.2f\n", mid, b.odds, odds, e.tr[0].f, e.tr[1].f, e.tr[0].whole, e.tr[1].whole, b.ratio, w0, u0, b.c[0].scatter, b.c[0].slope, p0, p1, e.byJitter(), e.local, e.tr[0].ev.mirrored, e.tr[1].ev.mirrored)
 	}
 	switch {
 	case b.n == 0:

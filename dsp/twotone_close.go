@@ -97,7 +97,7 @@ func (e *twoTone) takeClose(y *fitted, b *band, mid, g float64) {
 	c.phase = at + cphase(y.a) + (y.centre+y.fc)*d + y.c*d*d/2
 	l.phase = at + cphase(y.b) + (y.centre+y.fl)*d + (y.c+y.cl)*d*d/2
 	if _, u := e.anchor.when(y.mid); y.own < u || !e.anchor.known {
-		e.anchor.set(y.mid, y.carrier(y.mid), math.Hypot(y.own, e.anchor.scatter/math.Sqrt(y.span)), y.c, max(y.ownC, 1e-6))
+		e.anchor.set(y.mid, y.carrier(y.mid), math.Hypot(y.own, e.anchor.scatter/math.Sqrt(y.span)), y.c, max(y.ownC, 1e-6), y.span)
 	}
 	m := &e.memory
 	m.at, m.carrier, m.local = mid, c.f, l.f
