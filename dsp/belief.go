@@ -3,6 +3,7 @@ package dsp
 import (
 	"fmt"
 	"math"
+	"math/cmplx"
 	"os"
 )
 
@@ -40,13 +41,32 @@ func student(d, scale float64) float64 {
 	return -math.Log(scale) - 2*math.Log1p(x*x/3)
 }
 
-// begin starts the sum from what is known of the carrier.
-func (b *belief) begin(a anchor, mid float64) {
+// begin starts the sum from what is known of the carrier. One that is going on
+// for tones last seen a moment ago is kept: f are the tones now.
+func (b *belief) begin(a anchor, mid float64, f [2]float64) {
+	if last := max(b.at[0], b.at[1]); b.on && b.n > 0 && mid-last < 4 {
+		away := math.Abs(f[0]-b.f[0]) + math.Abs(f[1]-b.f[1])
+		if across := math.Abs(f[1]-b.f[0]) + math.Abs(f[0]-b.f[1]); across < away {
+			b.swap()
+		}
+		b.points = [2]int{}
+		return
+	}
 	if dbg {
 		w, u := a.when(mid)
 		fmt.Println("BEGIN", mid, w, u, a.scatter, a.slope)
 	}
 	*b = belief{on: true, since: mid, c: [2]anchor{a, a}}
+}
+
+// swap exchanges the tracks.
+func (b *belief) swap() {
+	b.odds, b.ratio = -b.odds, -b.ratio
+	b.c[0], b.c[1] = b.c[1], b.c[0]
+	b.f[0], b.f[1] = b.f[1], b.f[0]
+	b.slope[0], b.slope[1] = b.slope[1], b.slope[0]
+	b.at[0], b.at[1] = b.at[1], b.at[0]
+	b.points[0], b.points[1] = b.points[1], b.points[0]
 }
 
 // asCarrier returns the log-density of tone k at f, were it the carrier.
@@ -78,7 +98,7 @@ func (b *belief) asLocal(k int, mid, f, u float64) float64 {
 func (b *belief) add(tr *[2]track, mid float64) {
 	for k := range tr {
 		t := &tr[k]
-		if !t.live || !t.whole || t.at != mid {
+		if !t.live || !t.whole || t.at != mid || b.at[k] == mid {
 			continue
 		}
 		d := b.asCarrier(k, mid, t.f, t.uf) - b.asLocal(k, mid, t.f, t.uf)
@@ -101,7 +121,7 @@ func (b *belief) add(tr *[2]track, mid float64) {
 // trust keeps the carrier's path while both tones are known and so far apart
 // that neither can be taken for the other.
 func (e *twoTone) trust() {
-	if e.local < 0 || e.merged || e.hidden || e.held() < 2 {
+	if e.local < 0 || e.merged || e.hidden || e.belief.on || e.held() < 2 {
 		return
 	}
 	clear := 1.0
@@ -126,17 +146,9 @@ func (e *twoTone) trust() {
 // only on certainty.
 func (e *twoTone) weigh(mid float64) {
 	b := &e.belief
-	if !b.on {
-		return
-	}
 	b.add(&e.tr, mid)
 	odds := e.odds()
-	if dbg {
-		w0, u0 := b.c[0].when(mid)
-		_, p0 := e.tr[0].ev.carrierLike(&e.tr[1].ev)
-		_, p1 := e.tr[1].ev.carrierLike(&e.tr[0].ev)
-		fmt.Printf("W %.1f odds %.2f total %.2f f %.3f %.3f whole %v %v ratio %.1f anchor %.3f %.3f sc %.3f sl %.4f proven %v %v jit %d local %d mirrored %.2f %.2f\n", mid, b.odds, odds, e.tr[0].f, e.tr[1].f, e.tr[0].whole, e.tr[1].whole, b.ratio, w0, u0, b.c[0].scatter, b.c[0].slope, p0, p1, e.byJitter(), e.local, e.tr[0].ev.mirrored, e.tr[1].ev.mirrored)
-	}
+	e.dbgf(mid)
 	switch {
 	case b.n == 0:
 	case e.local < 0 && odds > sureEnough:
@@ -150,26 +162,60 @@ func (e *twoTone) weigh(mid float64) {
 	}
 	if e.local >= 0 {
 		e.anchor = b.c[1-e.local]
-		if mid-b.since > beliefSeconds {
-			b.on = false
-		}
+		b.on = mid-b.since < beliefSeconds
 	}
+}
+
+func (e *twoTone) dbgf(mid float64) {
+	if dbg {
+		b := &e.belief
+		odds := e.odds()
+		w0, u0 := b.c[0].when(mid)
+		_, p0 := e.tr[0].ev.carrierLike(&e.tr[1].ev)
+		_, p1 := e.tr[1].ev.carrierLike(&e.tr[0].ev)
+		fmt.Printf("W %.1f odds %.2f total %.2f f %.3f %.3f whole %v %v ratio %.1f anchor %.3f %.3f sc %.3f sl %.4f proven %v %v jit %d local %d mirrored %.2f %.2f\n", mid, b.odds, odds, e.tr[0].f, e.tr[1].f, e.tr[0].whole, e.tr[1].whole, b.ratio, w0, u0, b.c[0].scatter, b.c[0].slope, p0, p1, e.byJitter(), e.local, e.tr[0].ev.mirrored, e.tr[1].ev.mirrored)
+	}
+}
+
+// weighClose does the same for a fit of close tones, whose first line goes by
+// the name of carrier. It returns false when that is not, or not yet, certain.
+func (e *twoTone) weighClose(y *fitted, mid float64) bool {
+	b := &e.belief
+	var tr [2]track
+	tr[0] = track{live: true, whole: true, at: mid, f: y.carrier(mid), uf: y.uc, amp: cmplx.Abs(y.a)}
+	tr[1] = track{live: true, whole: true, at: mid, f: y.local(mid), uf: y.ul, amp: cmplx.Abs(y.b)}
+	b.add(&tr, mid)
+	odds := b.odds + e.byLevel()
+	switch {
+	case odds < -sureEnough:
+		b.swap()
+		e.pair.swap()
+		return true
+	case e.sure:
+		return odds > 0
+	}
+	return odds > sureEnough
+}
+
+// byLevel returns the log-odds by the levels alone.
+func (e *twoTone) byLevel() float64 {
+	b, m := &e.belief, &e.memory
+	if !m.known || b.n == 0 {
+		return 0
+	}
+	most := levelSay
+	if e.sm.sigma > spreadLeast {
+		most = 1 // the level of a carrier that fades says little
+	}
+	was := 20 * math.Log10(m.ampC/m.ampL)
+	v := 4 + m.evC.varies
+	return max(-most, min(most, ((-b.ratio-was)*(-b.ratio-was)-(b.ratio-was)*(b.ratio-was))/(2*v)))
 }
 
 // odds returns the log-odds for track 0 being the carrier: by motion, levels,
 // and the marks that only a carrier has.
 func (e *twoTone) odds() float64 {
-	b, m := &e.belief, &e.memory
-	sum := b.odds
-	if m.known && b.n > 0 {
-		most := levelSay
-		if e.sm.sigma > spreadLeast {
-			most = 1 // the level of a carrier that fades says little
-		}
-		was := 20 * math.Log10(m.ampC/m.ampL)
-		v := 4 + m.evC.varies
-		sum += max(-most, min(most, ((-b.ratio-was)*(-b.ratio-was)-(b.ratio-was)*(b.ratio-was))/(2*v)))
-	}
+	sum := e.belief.odds + e.byLevel()
 	if _, proven := e.tr[0].ev.carrierLike(&e.tr[1].ev); proven && e.tr[0].ev.seconds >= 5 && e.tr[1].ev.seconds >= 5 {
 		sum += provenSay
 	} else if _, proven := e.tr[1].ev.carrierLike(&e.tr[0].ev); proven && e.tr[0].ev.seconds >= 5 && e.tr[1].ev.seconds >= 5 {

@@ -212,6 +212,16 @@ func (e *twoTone) followJump(b *band, mid float64, own [2]int, old [2]track, wan
 	l := e.lens
 	swap, sure := match(want, [2]float64{l.lines[0].f + b.centre, l.lines[1].f + b.centre})
 	k0, k1 := own[0], own[1]
+	for i := range 2 { // a tone that jumped is as loud as it was, or it is another
+		o := i
+		if swap {
+			o = 1 - i
+		}
+		x := &l.lines[i]
+		if r := cmplx.Abs(x.a) / b.gain(x.f) / old[o].amp; math.Abs(x.f+b.centre-want[o]) > 1 && (r < 0.3 || r > 3.3) {
+			return false
+		}
+	}
 	if swap {
 		k0, k1 = k1, k0
 	}
@@ -376,7 +386,7 @@ func (e *twoTone) unmerge(mid float64, k int) {
 	// What either track was before is another tone's.
 	a.ev, b.ev, a.jit, b.jit = evidence{}, evidence{}, jitter{}, jitter{}
 	if e.memory.known {
-		e.belief.begin(e.trusted, mid)
+		e.belief.begin(e.trusted, mid, [2]float64{a.f, b.f})
 	}
 }
 

@@ -53,14 +53,20 @@ func (e *twoTone) followClose(mid float64) bool {
 		return false
 	}
 	if fresh {
-		e.sure = math.Abs(e.pair.lean) >= sureEnough
+		e.sure = math.Abs(e.pair.lean) >= sureEnough && y.span >= 8
+		e.belief.begin(e.trusted, mid, [2]float64{y.carrier(mid), y.local(mid)})
 	}
-	if !e.sure {
+	if e.belief.on {
+		e.sure = e.weighClose(y, mid) || fresh && e.sure
+		e.belief.on = !e.sure || mid-e.belief.since < beliefSeconds
+	}
+	if !e.sure && (fresh && y.span >= 8 || !e.belief.on) {
 		e.pair.forget() // a longer span may tell
 	}
-	if e.local < 0 {
-		e.local = 1
+	if e.local == 0 { // the fit's first line goes by track 0
+		e.tr[0], e.tr[1] = e.tr[1], e.tr[0]
 	}
+	e.local = 1
 	e.takeClose(y, b, mid, g)
 	return true
 }
