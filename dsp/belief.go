@@ -41,14 +41,10 @@ func student(d, scale float64) float64 {
 	return -math.Log(scale) - 2*math.Log1p(x*x/3)
 }
 
-// begin starts the sum from what is known of the carrier. One that is going on
-// for tones last seen a moment ago is kept: f are the tones now.
-func (b *belief) begin(a anchor, mid float64, f [2]float64) {
+// begin starts the sum from what is known of the carrier; one that is going on
+// for tones seen a moment ago is kept.
+func (b *belief) begin(a anchor, mid float64) {
 	if last := max(b.at[0], b.at[1]); b.on && b.n > 0 && mid-last < 4 {
-		away := math.Abs(f[0]-b.f[0]) + math.Abs(f[1]-b.f[1])
-		if across := math.Abs(f[1]-b.f[0]) + math.Abs(f[0]-b.f[1]); across < away {
-			b.swap()
-		}
 		b.points = [2]int{}
 		return
 	}
@@ -57,6 +53,16 @@ func (b *belief) begin(a anchor, mid float64, f [2]float64) {
 		fmt.Println("BEGIN", mid, w, u, a.scatter, a.slope)
 	}
 	*b = belief{on: true, since: mid, c: [2]anchor{a, a}}
+}
+
+// align puts the sum into the order of the tones as they are numbered now.
+func (b *belief) align(f0, f1 float64) {
+	if b.at[0] == 0 || b.at[1] == 0 {
+		return
+	}
+	if math.Abs(f1-b.f[0])+math.Abs(f0-b.f[1]) < math.Abs(f0-b.f[0])+math.Abs(f1-b.f[1]) {
+		b.swap()
+	}
 }
 
 // swap exchanges the tracks.
@@ -96,6 +102,7 @@ func (b *belief) asLocal(k int, mid, f, u float64) float64 {
 // add takes in the second around mid. A tone that was not there from end to end
 // says nothing.
 func (b *belief) add(tr *[2]track, mid float64) {
+	b.align(tr[0].f, tr[1].f)
 	for k := range tr {
 		t := &tr[k]
 		if !t.live || !t.whole || t.at != mid || b.at[k] == mid {

@@ -386,7 +386,7 @@ func (e *twoTone) unmerge(mid float64, k int) {
 	// What either track was before is another tone's.
 	a.ev, b.ev, a.jit, b.jit = evidence{}, evidence{}, jitter{}, jitter{}
 	if e.memory.known {
-		e.belief.begin(e.trusted, mid, [2]float64{a.f, b.f})
+		e.belief.begin(e.trusted, mid)
 	}
 }
 

@@ -43,8 +43,13 @@ func (e *twoTone) followClose(mid float64) bool {
 		x.smear = sm.sigma / math.Sqrt(1-steady)
 		x.haze = (1 - steady) * x.ampC * x.ampC / (math.Sqrt(2*math.Pi) * x.smear)
 	}
-	if !e.merged && e.pair.best < 0 { // until now they were followed second by second
-		e.pair.seed(&e.tr[1-e.local], &e.tr[e.local])
+	if !e.merged { // they have names
+		c, l := &e.tr[1-e.local], &e.tr[e.local]
+		if e.pair.best < 0 { // until now they were followed second by second
+			e.pair.seed(c, l)
+		} else if y := &e.pair.sol[e.pair.best]; math.Abs(y.carrier(c.at)-l.f) < math.Abs(y.carrier(c.at)-c.f) {
+			e.pair.swap()
+		}
 		e.sure = true
 	}
 	y, fresh := e.pair.solve(&x)
@@ -54,7 +59,7 @@ func (e *twoTone) followClose(mid float64) bool {
 	}
 	if fresh {
 		e.sure = math.Abs(e.pair.lean) >= sureEnough && y.span >= 8
-		e.belief.begin(e.trusted, mid, [2]float64{y.carrier(mid), y.local(mid)})
+		e.belief.begin(e.trusted, mid)
 	}
 	if e.belief.on {
 		e.sure = e.weighClose(y, mid) || fresh && e.sure
