@@ -53,6 +53,7 @@ type Reading struct {
 	Beat        float64 // local - carrier at RF, Hz; only when sign and identity are known
 	BeatU       float64 // of Beat or BeatAbs, Hz
 	BeatAbs     float64 // |beat|, Hz, also when only the size is known
+	BeatWithin  float64 // of a beat too slow to be measured yet: its size is below this, Hz
 	Error       float64 // Beat - set-off, Hz
 	Offset      float64 // Error / local frequency as heard, dimensionless
 	OffsetU     float64
@@ -78,7 +79,7 @@ type Reading struct {
 // Blank returns a Reading with every number unknown.
 func Blank(t float64, s State) Reading {
 	n := math.NaN()
-	return Reading{T: t, State: s, Beat: n, BeatU: n, BeatAbs: n, Error: n, Offset: n, OffsetU: n,
+	return Reading{T: t, State: s, Beat: n, BeatU: n, BeatAbs: n, BeatWithin: n, Error: n, Offset: n, OffsetU: n,
 		CarrierTone: n, LocalTone: n, CarrierDBFS: n, LocalDBFS: n, CarrierCN0: n, LocalCN0: n,
 		SpreadHz: n, Span: n, Phase: n, InputDBFS: n, ClockError: n, ClockErrorU: n}
 }
@@ -131,6 +132,7 @@ type readingJSON struct {
 	Beat        Num    `json:"beat_hz"`
 	BeatU       Num    `json:"beat_u_hz"`
 	BeatAbs     Num    `json:"beat_abs_hz"`
+	BeatWithin  Num    `json:"beat_within_hz"`
 	Error       Num    `json:"error_hz"`
 	Offset      Num    `json:"offset"`
 	OffsetU     Num    `json:"offset_u"`
@@ -173,6 +175,7 @@ func (r *Reading) AppendJSON(dst []byte) []byte {
 	num(`","beat_hz":`, r.Beat)
 	num(`,"beat_u_hz":`, r.BeatU)
 	num(`,"beat_abs_hz":`, r.BeatAbs)
+	num(`,"beat_within_hz":`, r.BeatWithin)
 	num(`,"error_hz":`, r.Error)
 	num(`,"offset":`, r.Offset)
 	num(`,"offset_u":`, r.OffsetU)
@@ -219,7 +222,7 @@ func (r *Reading) UnmarshalJSON(b []byte) error {
 	if err := json.Unmarshal(b, &j); err != nil {
 		return err
 	}
-	*r = Reading{float64(j.T), j.State, float64(j.Beat), float64(j.BeatU), float64(j.BeatAbs), float64(j.Error),
+	*r = Reading{float64(j.T), j.State, float64(j.Beat), float64(j.BeatU), float64(j.BeatAbs), float64(j.BeatWithin), float64(j.Error),
 		float64(j.Offset), float64(j.OffsetU), float64(j.CarrierTone), float64(j.LocalTone), float64(j.CarrierDBFS), float64(j.LocalDBFS),
 		float64(j.CarrierCN0), float64(j.LocalCN0), float64(j.SpreadHz), float64(j.Span), float64(j.Phase), j.PhaseRun,
 		float64(j.InputDBFS), j.Clipped, float64(j.ClockPPM) / 1e6, float64(j.ClockUPPM) / 1e6, j.ClockFrom, j.Flags, j.Why}

@@ -13,6 +13,7 @@ func (s *resting) search() {
 		return // a little more sound says little more
 	}
 	s.due = int(min(all/32, 4))
+	s.within = math.NaN()
 	if all < slowLeast {
 		s.seen, s.why = s.known, "listening for a slow beat"
 		return
@@ -40,7 +41,7 @@ func (s *resting) search() {
 	}
 	if s.fit.n > 0 {
 		s.explain(slowLeast)
-		s.why = "what moves around 0 Hz is not one steady beat: let the trimmer rest"
+		s.why, s.within = "what moves around 0 Hz is not one steady beat: let the trimmer rest", math.NaN()
 	}
 }
 

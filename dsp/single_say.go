@@ -13,7 +13,7 @@ func (s *single) readingAtRest(t, end float64) Reading {
 	r.Why = "no tone stands out of the noise"
 	if !s.rest.told() {
 		if s.rest.seen {
-			r.State, r.Why = Merged, s.rest.why
+			r.State, r.Why, r.BeatWithin = Merged, s.rest.why, s.rest.within*(1+s.cfg.SampleRateError)
 		}
 		if s.rest.held {
 			r.Why = fmt.Sprintf("a beat about %.2g Hz shows: %.0f s more to be sure of it", math.Abs(s.rest.fit.x.f), math.Ceil(s.rest.proven-s.rest.ring.upto()))
@@ -103,6 +103,7 @@ func (s *resting) explain(span float64) {
 		s.why = "listening to a faster beat"
 		return
 	}
+	s.within = most
 	if c.complex {
 		s.why = s.explainTurn(span, still)
 		return
@@ -124,6 +125,7 @@ func (s *resting) explainTurn(span float64, still bool) string {
 	c := &s.fit
 	at, v, uv := c.drift()
 	within := min((cmplx.Abs(v)+2*uv)/(math.Pi*max(cmplx.Abs(at), 1e-9)), 1/span) // a whole turn would have been seen
+	s.within = within
 	if still {
 		return fmt.Sprintf("at rest within ±%.2g Hz, if no more than half of what stands at 0 Hz is the input's offset; or no beat at all", within)
 	}

@@ -42,8 +42,9 @@ type resting struct {
 	amp    float64
 	noise  float64 // density of one component, see circleFit.density; 0: not known
 
-	seen bool   // while nothing is held: something stands or moves at 0 Hz
-	why  string // and what that may be
+	seen   bool    // while nothing is held: something stands or moves at 0 Hz
+	why    string  // and what that may be
+	within float64 // a beat there is slower than this, Hz; NaN: not known
 }
 
 func newResting(cfg *Config, p *plan) *resting {

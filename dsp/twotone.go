@@ -54,6 +54,7 @@ type twoTone struct {
 	pair     *pair
 	anchor   anchor
 	belief   belief
+	zero     nearZero
 	trusted  anchor  // the carrier's path as it was when the tones were last well apart and known
 	sure     bool    // which of two close tones is which
 	closest  *fitted // what the joint fit of close tones says in this second, nil: nothing

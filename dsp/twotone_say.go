@@ -132,6 +132,7 @@ func (e *twoTone) reading(mid float64) Reading {
 		if e.hidden {
 			r.Why = fmt.Sprintf("the local is somewhere in the carrier's smear: needs about %.0f s at rest", e.sm.needs(e.memory.ampL))
 		}
+		e.sayNear(&r, mid, scale)
 	case held == 1:
 		e.sayLone(&r, scale)
 	default:

@@ -20,6 +20,7 @@ var gauges = []struct {
 }{
 	{desc("beat_hertz", "Local minus carrier at radio frequency; positive: the local is high.", "bench"), "", func(r *dsp.Reading) float64 { return r.Beat }},
 	{desc("beat_abs_hertz", "Size of the beat, known also where its sign is not.", "bench"), "", func(r *dsp.Reading) float64 { return r.BeatAbs }},
+	{desc("beat_within_hertz", "What a beat too slow to be measured yet is known to stay below.", "bench"), "", func(r *dsp.Reading) float64 { return r.BeatWithin }},
 	{desc("beat_uncertainty_hertz", "Standard uncertainty of the beat as received in its span.", "bench"), "", func(r *dsp.Reading) float64 { return r.BeatU }},
 	{desc("error_hertz", "Beat minus the declared set-off: what has to be trimmed away.", "bench"), "", func(r *dsp.Reading) float64 { return r.Error }},
 	{desc("offset_ratio", "Error over the local's frequency: the fractional frequency offset.", "bench"), "", func(r *dsp.Reading) float64 { return r.Offset }},

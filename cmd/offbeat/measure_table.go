@@ -123,6 +123,9 @@ func (t *table) row(w io.Writer) {
 			beat = "±" + beat[1:]
 		}
 	}
+	if len(t.beats) == 0 && !math.IsNaN(t.last.BeatWithin) {
+		beat = fmt.Sprintf("within ±%.2g", t.last.BeatWithin)
+	}
 	var flags []string
 	for _, f := range dsp.Flags {
 		if t.flags[f] {
@@ -197,6 +200,8 @@ func (l *liveLine) show(r *dsp.Reading) {
 		fmt.Fprintf(l.w, "  beat %+.4f Hz  offset %+.2e", r.Beat, r.Offset)
 	case !math.IsNaN(r.BeatAbs):
 		fmt.Fprintf(l.w, "  beat ±%.4f Hz", r.BeatAbs)
+	case !math.IsNaN(r.BeatWithin):
+		fmt.Fprintf(l.w, "  beat within ±%.2g Hz", r.BeatWithin)
 	}
 	if l.total > 0 {
 		fmt.Fprintf(l.w, "  (%.0f %% read)", min(100*(r.T+0.5)/l.total, 100))

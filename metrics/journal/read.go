@@ -137,7 +137,7 @@ func (r *Reader) Readings(ctx context.Context, bench string, from, to time.Time,
 		g.CarrierTone, g.LocalTone = v(3, 1), v(4, 1)
 		g.CarrierDBFS, g.LocalDBFS, g.CarrierCN0, g.LocalCN0 = v(5, 100), v(6, 100), v(7, 100), v(8, 100)
 		g.SpreadHz, g.Span, g.Phase, g.InputDBFS = v(9, 1), v(10, 1000), v(11, 1), v(12, 100)
-		g.ClockError, g.ClockErrorU = math.NaN(), math.NaN() // not kept
+		g.BeatWithin, g.ClockError, g.ClockErrorU = math.NaN(), math.NaN(), math.NaN() // not kept
 		if err := yield(out); err != nil {
 			return err
 		}

@@ -66,6 +66,8 @@ func far(r *dsp.Reading) string {
 		return fmt.Sprintf("%+.*f Hz, %s", digits, r.Error, side)
 	case !math.IsNaN(r.BeatAbs):
 		return fmt.Sprintf("%.*f Hz to one side or the other", digits, r.BeatAbs)
+	case !math.IsNaN(r.BeatWithin):
+		return fmt.Sprintf("zero beat within ±%.2g Hz", r.BeatWithin)
 	}
 	return "not known now"
 }
