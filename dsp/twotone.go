@@ -40,6 +40,7 @@ type twoTone struct {
 	asked    bool // the hint has had its say
 	local    int  // index of the local's track, -1: not known
 	merged   bool
+	torn     int // seconds in a row in which one of two near tones was there in part
 	missed   int // seconds in a row without any tone while merged
 	jumped   bool
 	alone    int // seconds since only one tone has been held
@@ -182,6 +183,9 @@ func (e *twoTone) followBoth(b *band, mid float64, own [2]int) {
 	old := [2]track{e.tr[own[0]], e.tr[own[1]]}
 	want := [2]float64{old[0].predict(mid), old[1].predict(mid)}
 	close := math.Min(math.Abs(want[0]-want[1]), math.Abs(old[0].f-old[1].f)) < holdApart+1
+	if close && e.followTorn(b, mid, own, old, want) {
+		return
+	}
 	l.lines = l.lines[:0]
 	n := e.scan(b, 2)
 	if n == 2 && e.followJump(b, mid, own, old, want) {
@@ -205,6 +209,53 @@ func (e *twoTone) followBoth(b *band, mid float64, own [2]int) {
 			}
 		}
 	}
+}
+
+// followTorn looks whether one of two near tones has left while the other
+// stays: that is no meeting of the two. It reports whether it is so, or may be
+// because one of them came or went within this second.
+func (e *twoTone) followTorn(b *band, mid float64, own [2]int, old [2]track, want [2]float64) bool {
+	l := e.lens
+	if math.Abs(want[0]-want[1]) < 0.8*holdApart {
+		return false
+	}
+	l.lines = l.lines[:0]
+	for i := range 2 {
+		l.add(want[i]-b.centre, old[i].c)
+	}
+	if !l.fit.run(&l.win, l.lines, 0, 1, -b.centre) {
+		return false
+	}
+	var r [2]float64
+	for i := range 2 {
+		r[i] = cmplx.Abs(l.lines[i].a) / b.gain(l.lines[i].f) / old[i].amp
+	}
+	gone := 0
+	if r[1] < r[0] {
+		gone = 1
+	}
+	stays := 1 - gone
+	if r[gone] > 0.75 || r[stays] < 0.6 {
+		e.torn = 0
+		return false
+	}
+	e.tr[own[0]], e.tr[own[1]] = old[0], old[1]
+	if r[gone] > 0.15 { // it went, or faded, or they draw near: the next second tells
+		if e.torn++; e.torn > 2 {
+			e.torn = 0
+			return false
+		}
+		e.tr[own[0]].whole, e.tr[own[1]].whole = false, false
+		return true
+	}
+	e.torn = 0
+	l.lines = append(l.lines[:0], l.lines[stays])
+	if !l.solve(b, true) || math.Abs(l.lines[0].f+b.centre-want[stays]) > 0.3 {
+		return false
+	}
+	e.miss(b)
+	e.take(b, mid, own[stays], 0)
+	return true
 }
 
 // followJump takes up two lines found afresh where both are there from end to

@@ -62,7 +62,7 @@ func (e *twoTone) spot(mid float64) bool {
 			return false
 		}
 	}
-	if m := &e.memory; m.known && m.evC.seconds >= 10 {
+	if m := &e.memory; m.known {
 		// Of a pair that was known the carrier must have been a smeared one, and
 		// the line must be as loud as the local was.
 		level := 20 * math.Log10(math.Sqrt(a2)/m.ampL)
