@@ -66,11 +66,29 @@ func judgeRest(all []played, bounded bool) []figure {
 		told("seconds with a wrong sign", float64(signs), ""),
 		most("readings at rest beyond 4u", percent(far, every.n()), 1, "%"),
 		told("readings at rest within 2u", every.within(2), "%"),
+		most("seconds said to be nearer zero beat than they are", float64(tooNear(all)), 0, ""),
 	}
 	if bounded {
 		f = append(f, most("rms error at the end", last.rms()*1e3, 0.1, "mHz"), most("rms error / joint bound of its span", ratio.rms(), 1.5, ""))
 	}
 	return f
+}
+
+// tooNear counts the seconds whose bound of a beat not measured yet is wrong. A
+// local that is being turned has a second's grace.
+func tooNear(all []played) int {
+	n := 0
+	for i := range all {
+		for k, r := range all[i].readings {
+			t := all[i].truthAt(k)
+			was := all[i].truthAt(max(0, k-1))
+			is := min(math.Abs(t.Beat), math.Abs(t.Received), math.Abs(was.Beat), math.Abs(was.Received))
+			if is > r.BeatWithin {
+				n++
+			}
+		}
+	}
+	return n
 }
 
 func closeRows() []row {

@@ -81,6 +81,7 @@ func judgeZero(all []played, within, share float64) []figure {
 	return []figure{
 		most("scenes with a wrong sign beyond 0.7 Hz", float64(wrong), 0, ""),
 		told("such seconds", float64(seconds), ""),
+		most("seconds said to be nearer zero beat than they are", float64(tooNear(all)), 0, ""),
 		least("apart again in time", percent(back, len(all)), share, "%"),
 		told("median wait after 2 Hz", median(waits), "s"),
 		most("median error while it turns", turning.medianSize()*1e3, 50, "mHz"),
