@@ -81,9 +81,15 @@ func (a *anchor) advance(dt float64) {
 	a.p11 += q * dt
 }
 
-// set takes frequency and drift of a fit over span seconds for what they are.
+// set takes frequency and drift of a fit over span seconds for what they are;
+// the drift only where it is not known better.
 func (a *anchor) set(t, f, u, slope, us, span float64) {
 	s := a.scatter
+	// What a fading carrier does to the slope of so short a span.
+	us = math.Hypot(us, 6*s/math.Pow(span, 1.5))
+	if was, u := a.drift(t); a.known && u < us {
+		slope, us = was, u
+	}
 	*a = anchor{known: true, at: t, hz: f, slope: slope, p00: u * u, p11: us * us, scatter: s, n: max(a.n, int(span))}
 }
 
