@@ -1,10 +1,8 @@
 package dsp
 
 import (
-	"fmt"
 	"math"
 	"math/cmplx"
-	"os"
 )
 
 const (
@@ -32,6 +30,8 @@ type belief struct {
 	slope  [2]float64 // how it moved, Hz/s
 	at     [2]float64 // when
 	points [2]int     // seconds in a row that showed it
+	seen   float64    // when it was last asked, s
+	next   float64    // when a fit over a long span will have half of it new, s
 }
 
 // student returns the log of Student's density of three degrees of freedom, but
@@ -44,13 +44,9 @@ func student(d, scale float64) float64 {
 // begin starts the sum from what is known of the carrier; one that is going on
 // for tones seen a moment ago is kept.
 func (b *belief) begin(a anchor, mid float64) {
-	if last := max(b.at[0], b.at[1]); b.on && b.n > 0 && mid-last < 4 {
+	if b.on && b.n > 0 && mid-b.seen < 4 {
 		b.points = [2]int{}
 		return
-	}
-	if dbg {
-		w, u := a.when(mid)
-		fmt.Println("BEGIN", mid, w, u, a.scatter, a.slope)
 	}
 	*b = belief{on: true, since: mid, c: [2]anchor{a, a}}
 }
@@ -76,12 +72,13 @@ func (b *belief) swap() {
 }
 
 // asCarrier returns the log-density of tone k at f, were it the carrier.
-func (b *belief) asCarrier(k int, mid, f, u float64) float64 {
+func (b *belief) asCarrier(k int, mid, f, u, span float64) float64 {
 	a := &b.c[k]
 	want, v := a.when(mid)
-	l := student(f-want, math.Sqrt(v*v+u*u+a.scatter*a.scatter+carrierSlack*carrierSlack))
-	scatter := a.scatter // it was learned where the carrier was known
-	a.add(mid, f, math.Hypot(u, carrierSlack))
+	scatter, slack := a.scatter, carrierSlack/math.Sqrt(span) // it was learned where the carrier was known
+	a.scatter /= math.Sqrt(span)
+	l := student(f-want, math.Sqrt(v*v+u*u+a.scatter*a.scatter+slack*slack))
+	a.add(mid, f, math.Hypot(u, slack))
 	a.scatter = scatter
 	return l
 }
@@ -99,16 +96,16 @@ func (b *belief) asLocal(k int, mid, f, u float64) float64 {
 	return student(f-b.f[k]-b.slope[k]*dt, math.Hypot(localSlack*dt, 3*u))
 }
 
-// add takes in the second around mid. A tone that was not there from end to end
-// says nothing.
-func (b *belief) add(tr *[2]track, mid float64) {
+// add takes in what span seconds around mid say. A tone that was not there from
+// end to end says nothing.
+func (b *belief) add(tr *[2]track, mid, span float64) {
 	b.align(tr[0].f, tr[1].f)
 	for k := range tr {
 		t := &tr[k]
 		if !t.live || !t.whole || t.at != mid || b.at[k] == mid {
 			continue
 		}
-		d := b.asCarrier(k, mid, t.f, t.uf) - b.asLocal(k, mid, t.f, t.uf)
+		d := b.asCarrier(k, mid, t.f, t.uf, span) - b.asLocal(k, mid, t.f, t.uf)
 		if k == 1 {
 			d = -d
 		}
@@ -153,9 +150,9 @@ func (e *twoTone) trust() {
 // only on certainty.
 func (e *twoTone) weigh(mid float64) {
 	b := &e.belief
-	b.add(&e.tr, mid)
+	b.seen = mid
+	b.add(&e.tr, mid, 1)
 	odds := e.odds()
-	e.dbgf(mid)
 	switch {
 	case b.n == 0:
 	case e.local < 0 && odds > sureEnough:
@@ -173,25 +170,20 @@ func (e *twoTone) weigh(mid float64) {
 	}
 }
 
-func (e *twoTone) dbgf(mid float64) {
-	if dbg {
-		b := &e.belief
-		odds := e.odds()
-		w0, u0 := b.c[0].when(mid)
-		_, p0 := e.tr[0].ev.carrierLike(&e.tr[1].ev)
-		_, p1 := e.tr[1].ev.carrierLike(&e.tr[0].ev)
-		fmt.Printf("W %.1f odds %.2f total %.2f f %.3f %.3f whole %v %v ratio %.1f anchor %.3f %.3f sc %.3f sl %.4f proven %v %v jit %d local %d mirrored %.2f %.2f\n", mid, b.odds, odds, e.tr[0].f, e.tr[1].f, e.tr[0].whole, e.tr[1].whole, b.ratio, w0, u0, b.c[0].scatter, b.c[0].slope, p0, p1, e.byJitter(), e.local, e.tr[0].ev.mirrored, e.tr[1].ev.mirrored)
-	}
-}
-
 // weighClose does the same for a fit of close tones, whose first line goes by
 // the name of carrier. It returns false when that is not, or not yet, certain.
 func (e *twoTone) weighClose(y *fitted, mid float64) bool {
 	b := &e.belief
-	var tr [2]track
-	tr[0] = track{live: true, whole: true, at: mid, f: y.carrier(mid), uf: y.uc, amp: cmplx.Abs(y.a)}
-	tr[1] = track{live: true, whole: true, at: mid, f: y.local(mid), uf: y.ul, amp: cmplx.Abs(y.b)}
-	b.add(&tr, mid)
+	b.seen = mid
+	if at := y.mid; at >= b.next || y.span <= 2 {
+		var tr [2]track
+		tr[0] = track{live: true, whole: true, at: at, f: y.carrier(at), uf: y.uc, amp: cmplx.Abs(y.a)}
+		tr[1] = track{live: true, whole: true, at: at, f: y.local(at), uf: y.ul, amp: cmplx.Abs(y.b)}
+		b.add(&tr, at, y.span)
+		b.next = at + y.span/2
+	} else {
+		b.align(y.carrier(at), y.local(at))
+	}
 	odds := b.odds + e.byLevel()
 	switch {
 	case odds < -sureEnough:
@@ -236,7 +228,3 @@ func (e *twoTone) odds() float64 {
 	}
 	return sum
 }
-
-func init() { dbg = os.Getenv("DBG") != "" }
-
-var dbg bool

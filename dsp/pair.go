@@ -56,9 +56,10 @@ type expect struct {
 	ampC, ampL float64 // levels, 0: not known
 	centre     float64 // audio Hz around which to look
 	floor      float64 // density of the noise
+	since      float64 // when the tones met, s: before that the local was elsewhere
 	smear      float64 // rms width of the carrier's fading part, Hz; 0: it stands still
 	haze       float64 // density of that part at its middle
-	leaning    func(f, amp [2]float64, at, uf, ul float64) float64
+	leaning    func(f, amp [2]float64, at, span, uf, ul float64) float64
 }
 
 // spanFits reports whether two lines can stand for a fading carrier and a local
@@ -117,7 +118,7 @@ func (p *pair) solve(x *expect) (best *fitted, fresh bool) {
 		case k > 0 && old[k-1].ok:
 			start = &old[k-1]
 		}
-		if start == nil && (any || k == 0 || k > 6) || !x.spanFits(span, 4) {
+		if start == nil && (any || k == 0 || k > 7 || k > 2 && x.end-span < x.since-1) || !x.spanFits(span, 4) {
 			continue
 		}
 		p.slow.fetch(&p.st, x.end, span, x.centre, grain)
@@ -293,7 +294,7 @@ func (p *pair) cold(k int, span float64, x *expect) {
 	if !y.ok {
 		return
 	}
-	p.lean = x.leaning([2]float64{y.carrier(y.mid), y.local(y.mid)}, [2]float64{cmplx.Abs(y.a), cmplx.Abs(y.b)}, y.mid, max(y.uc, y.ul), y.level)
+	p.lean = x.leaning([2]float64{y.carrier(y.mid), y.local(y.mid)}, [2]float64{cmplx.Abs(y.a), cmplx.Abs(y.b)}, y.mid, y.span, max(y.uc, y.ul), y.level)
 	if p.lean < 0 {
 		p.swap()
 		y = p.sol[k]

@@ -40,8 +40,9 @@ type twoTone struct {
 	asked    bool // the hint has had its say
 	local    int  // index of the local's track, -1: not known
 	merged   bool
-	torn     int // seconds in a row in which one of two near tones was there in part
-	missed   int // seconds in a row without any tone while merged
+	met      float64 // since when, s
+	torn     int     // seconds in a row in which one of two near tones was there in part
+	missed   int     // seconds in a row without any tone while merged
 	jumped   bool
 	alone    int // seconds since only one tone has been held
 	memory   pairMemory
@@ -309,7 +310,7 @@ func match(want, found [2]float64) (swap, sure bool) {
 
 // merge holds both tones as one.
 func (e *twoTone) merge(mid float64, own [2]int) {
-	e.merged, e.candN, e.missed = true, 0, 0
+	e.merged, e.candN, e.missed, e.met = true, 0, 0, mid
 	e.count.broken()
 	a, b := &e.tr[own[0]], &e.tr[own[1]]
 	a.f, a.c, a.at = (a.f+b.f)/2, 0, mid

@@ -34,7 +34,7 @@ func (e *twoTone) followClose(mid float64) bool {
 	e.slow.aim(centre)
 	e.slow.advance(b)
 	g := b.gain(centre - b.centre)
-	x := expect{end: mid + 0.5, anchor: &e.anchor, leaning: e.leaning, centre: centre, ampC: e.memory.ampC * g, ampL: e.memory.ampL * g, floor: t.noise * g * g}
+	x := expect{end: mid + 0.5, anchor: &e.anchor, leaning: e.leaning, centre: centre, ampC: e.memory.ampC * g, ampL: e.memory.ampL * g, floor: t.noise * g * g, since: e.met}
 	if sm := e.sm; sm.sigma > spreadLeast && !(sm.steady > 0.97) {
 		steady := sm.steady
 		if math.IsNaN(steady) {
@@ -118,12 +118,12 @@ func (e *twoTone) takeClose(y *fitted, b *band, mid, g float64) {
 // leaning returns the log-odds that tone 0 is the carrier and tone 1 the local
 // and not the other way round: by where the carrier was headed at time at, and
 // by the levels. uf is the uncertainty of the tones themselves, level that of
-// the ratio of their amplitudes.
-func (e *twoTone) leaning(f, amp [2]float64, at, uf, level float64) float64 {
+// the ratio of their amplitudes, span what they rest on.
+func (e *twoTone) leaning(f, amp [2]float64, at, span, uf, level float64) float64 {
 	sum := 0.0
 	if e.anchor.known {
 		want, u := e.anchor.when(at)
-		u = math.Sqrt(u*u + uf*uf + e.anchor.scatter*e.anchor.scatter + 1e-6)
+		u = math.Sqrt(u*u + uf*uf + e.anchor.scatter*e.anchor.scatter/span + 1e-6)
 		d0, d1 := (f[0]-want)/u, (f[1]-want)/u
 		if min(math.Abs(d0), math.Abs(d1)) < 6 {
 			sum += max(-20, min(20, (d1*d1-d0*d0)/2))
