@@ -8,13 +8,21 @@ import (
 	"offbeat/dsp"
 )
 
-func desc(name, help string, labels ...string) *prometheus.Desc {
-	return prometheus.NewDesc("offbeat_"+name, help, labels, nil)
+// metric is a description that still knows what it was made of.
+type metric struct {
+	*prometheus.Desc
+	name, help string
+	labels     []string
+}
+
+func desc(name, help string, labels ...string) metric {
+	name = "offbeat_" + name
+	return metric{prometheus.NewDesc(name, help, labels, nil), name, help, labels}
 }
 
 // gauges are the values of a reading. Each is absent while it is not known.
 var gauges = []struct {
-	desc *prometheus.Desc
+	desc metric
 	tone string // label value, or none
 	of   func(r *dsp.Reading) float64
 }{
@@ -71,12 +79,12 @@ var (
 // Describe implements prometheus.Collector.
 func (e *Exporter) Describe(ch chan<- *prometheus.Desc) {
 	for _, g := range gauges {
-		ch <- g.desc
+		ch <- g.desc.Desc
 	}
-	for _, d := range []*prometheus.Desc{descUp, descInfo, descState, descFlag, descLast, descReadings, descFlagged, descSamples, descLost,
+	for _, d := range []metric{descUp, descInfo, descState, descFlag, descLast, descReadings, descFlagged, descSamples, descLost,
 		descGaps, descClipped, descBad, descBreaks, descCommitted, descPending, descDropped, descJErrors, descBytes, descLastCommit,
 		descReloadOK, descReloadAt} {
-		ch <- d
+		ch <- d.Desc
 	}
 }
 
@@ -112,8 +120,7 @@ func (e *Exporter) Collect(ch chan<- prometheus.Metric) {
 func (b *Bench) collect(ch chan<- prometheus.Metric, name string) {
 	b.mu.Lock()
 	defer b.mu.Unlock()
-	i := b.info
-	gauge(ch, descInfo, 1, name, i.Hookup, i.Sideband, i.Input, plain(i.CarrierHz), plain(i.LocalHz))
+	gauge(ch, descInfo, 1, append([]string{name}, b.info.values()...)...)
 	up := !b.at.IsZero() && b.now().Sub(b.at) < StaleAfter
 	gauge(ch, descUp, one(up), name)
 	if !b.at.IsZero() {
@@ -152,12 +159,12 @@ func (b *Bench) collect(ch chan<- prometheus.Metric, name string) {
 	counter(ch, descBreaks, b.breaks, name)
 }
 
-func gauge(ch chan<- prometheus.Metric, d *prometheus.Desc, v float64, labels ...string) {
-	ch <- prometheus.MustNewConstMetric(d, prometheus.GaugeValue, v, labels...)
+func gauge(ch chan<- prometheus.Metric, d metric, v float64, labels ...string) {
+	ch <- prometheus.MustNewConstMetric(d.Desc, prometheus.GaugeValue, v, labels...)
 }
 
-func counter(ch chan<- prometheus.Metric, d *prometheus.Desc, v float64, labels ...string) {
-	ch <- prometheus.MustNewConstMetric(d, prometheus.CounterValue, v, labels...)
+func counter(ch chan<- prometheus.Metric, d metric, v float64, labels ...string) {
+	ch <- prometheus.MustNewConstMetric(d.Desc, prometheus.CounterValue, v, labels...)
 }
 
 func one(b bool) float64 {
@@ -165,6 +172,11 @@ func one(b bool) float64 {
 		return 1
 	}
 	return 0
+}
+
+// values are those of descInfo's labels beside bench.
+func (i BenchInfo) values() []string {
+	return []string{i.Hookup, i.Sideband, i.Input, plain(i.CarrierHz), plain(i.LocalHz)}
 }
 
 func plain(hz float64) string { return strconv.FormatFloat(hz, 'f', -1, 64) }
