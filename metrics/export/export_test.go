@@ -94,7 +94,7 @@ func random(t testing.TB) (path string, rows map[string][]journal.Row) {
 			setup := &journal.Setup{Hookup: "two-tone", Sideband: "usb", CarrierHz: 10e6, LocalHz: 10e6, Input: `a "test", with \ and more`}
 			j.Setup(bench, *setup)
 			i := 0
-			for n := range 3000 + r.IntN(3000) {
+			for n := range map[string]int{"counter": chunkRows + 1, "generator": 200}[bench] + r.IntN(400) {
 				if n == 2000 && bench == "counter" {
 					setup = &journal.Setup{Hookup: "two-tone", Sideband: "lsb", CarrierHz: 5e6, LocalHz: 5e6 + 100, Input: "another"}
 					j.Setup(bench, *setup)

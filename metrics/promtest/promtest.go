@@ -23,6 +23,12 @@ type Server struct{ url string }
 // test ends. Where none is installed the test is skipped, loudly.
 func Start(t *testing.T, target string) *Server {
 	t.Helper()
+	return StartOn(t, filepath.Join(t.TempDir(), "data"), target)
+}
+
+// StartOn is Start with a storage that may hold blocks already.
+func StartOn(t *testing.T, data, target string) *Server {
+	t.Helper()
 	prog, err := exec.LookPath("prometheus")
 	if err != nil {
 		t.Skip("SKIPPED: prometheus (Debian package prometheus) is not installed: no real server scraped the daemon")
@@ -43,7 +49,7 @@ func Start(t *testing.T, target string) *Server {
 	if err != nil {
 		t.Fatal(err)
 	}
-	cmd := exec.Command(prog, "--config.file="+conf, "--storage.tsdb.path="+filepath.Join(dir, "data"), "--web.listen-address="+addr)
+	cmd := exec.Command(prog, "--config.file="+conf, "--storage.tsdb.path="+data, "--web.listen-address="+addr)
 	cmd.Stdout, cmd.Stderr = log, log
 	if err := cmd.Start(); err != nil {
 		t.Fatal(err)
@@ -73,9 +79,12 @@ type Sample struct {
 }
 
 // Query evaluates an expression now.
-func (s *Server) Query(expr string) ([]Sample, error) {
+func (s *Server) Query(expr string) ([]Sample, error) { return s.QueryAt(expr, time.Now()) }
+
+// QueryAt evaluates an expression as of a time.
+func (s *Server) QueryAt(expr string, at time.Time) ([]Sample, error) {
 	c := http.Client{Timeout: 5 * time.Second}
-	r, err := c.Get(s.url + "/api/v1/query?query=" + url.QueryEscape(expr))
+	r, err := c.Get(s.url + "/api/v1/query?" + url.Values{"query": {expr}, "time": {at.UTC().Format(time.RFC3339Nano)}}.Encode())
 	if err != nil {
 		return nil, err
 	}
