@@ -42,7 +42,7 @@ lint: ## gofmt, go vet, staticcheck
 bench: build need-test ## the figures: accuracy against the bounds, speed, memory, load
 	OFFBEAT_LONG=1 CGO_ENABLED=$(CGO) $(GO) test $(TAGS) -timeout 60m -count=1 -v -run 'Bound|Bias|NoiseHour|Uncertainty|Quadrature|Mixer' ./dsp | grep -E 'ratio|bias|readings|u/rms|^(---|ok|FAIL)|Hz/|panic'
 	CGO_ENABLED=$(CGO) $(GO) test $(TAGS) -run '^$$' -bench . -benchmem ./dsp ./capture/...
-	OFFBEAT_LONG=1 CGO_ENABLED=$(CGO) $(GO) test $(TAGS) -timeout 30m -count=1 -v -run 'TestSpeed|TestLoad|TestMemory' ./cmd/offbeat
+	OFFBEAT_LONG=1 CGO_ENABLED=$(CGO) $(GO) test $(TAGS) -timeout 30m -count=1 -v -run 'TestSpeed|TestLoad|TestMemory|TestExportMemory' ./cmd/offbeat
 
 bench-accuracy: ## every accuracy figure beside its limit (hours)
 	CGO_ENABLED=0 $(GO) run ./cmd/accuracy --scenes 200
@@ -51,4 +51,4 @@ need-sound:
 	@$(NEED) "sound-card support" portaudio19-dev pkg-config gcc libc6-dev
 
 need-test:
-	@$(NEED) "tests against other programs" sox libsox-fmt-all ffmpeg flac sndfile-programs pulseaudio pulseaudio-utils libasound2-plugins prometheus sqlite3
+	@$(NEED) "tests against other programs" sox libsox-fmt-all ffmpeg flac sndfile-programs pulseaudio pulseaudio-utils libasound2-plugins prometheus python3-prometheus-client sqlite3

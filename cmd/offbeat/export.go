@@ -49,8 +49,8 @@ A TIME of --from and --to is 2030-01-02 (its beginning), 2030-01-02T03:04:05Z,
 "2030-01-02 03:04", "yesterday 18:00", today, now, or -12h for 12 hours ago. What
 has no zone is in UTC.
 
-To fill a night into Prometheus, then stop it, move the blocks into its storage
-and start it again:
+To fill a night into Prometheus, make blocks of it and move them into its
+storage, where it finds them within a minute or so:
   offbeat export --from "yesterday 18:00" --to "today 06:00" \
       --format openmetrics --label job=offbeat \
       --label instance=127.0.0.1:9471 -o night.om

@@ -10,7 +10,7 @@ import (
 )
 
 // chunkRows is how many rows of a spool lie together.
-const chunkRows = 4096
+const chunkRows = 1024
 
 // spool is a table of doubles in a temporary file that has no name any more, so
 // that nothing of it is left behind however the process ends. It is written row

@@ -191,6 +191,17 @@ func TestMigration(t *testing.T) {
 		t.Fatal(err)
 	}
 	db.Close()
+	r, err := OpenReadOnly(path) // which changes nothing
+	if err != nil {
+		t.Fatal(err)
+	}
+	if got := readings(t, r, "old"); len(got) != 1 || got[0].Reading.Beat != 1.5 || got[0].Setup.Input != "x" {
+		t.Errorf("read as it is: %+v", got)
+	}
+	if _, _, ok, err := r.MinutesExtent(context.Background(), "old", time.Time{}, begin); ok || err != nil {
+		t.Errorf("minutes of a schema without: %v %v", ok, err)
+	}
+	r.Close()
 	j := open(t, path, Options{})
 	defer j.Close()
 	got := readings(t, j.Reader(), "old")
@@ -370,6 +381,43 @@ func killed(path string) {
 	}
 }
 
+// A reader that takes its time does not keep the writer's log from being folded
+// in: within a page nothing is held.
+func TestSlowReader(t *testing.T) {
+	path := filepath.Join(t.TempDir(), "j.sqlite")
+	j := open(t, path, Options{})
+	defer j.Close()
+	put := func(from, n int) {
+		for i := range n {
+			j.Append("counter", begin.Add(time.Duration(from+i)*time.Second), sample(from+i))
+		}
+		flush(t, j)
+	}
+	put(0, 3*pageRows)
+	r, err := OpenReadOnly(path)
+	if err != nil {
+		t.Fatal(err)
+	}
+	defer r.Close()
+	n := 0
+	err = r.Readings(context.Background(), "counter", begin, begin.Add(time.Hour*24), func(row Row) error {
+		if row.Reading.T != float64(n)+0.5 {
+			t.Fatalf("reading %d is of %v", n, row.Reading.T)
+		}
+		if n++; n == pageRows+pageRows/2 {
+			put(3*pageRows, 10)
+			var busy, logged, folded int
+			if err := j.db.QueryRow("PRAGMA wal_checkpoint(TRUNCATE)").Scan(&busy, &logged, &folded); err != nil || busy != 0 {
+				t.Errorf("the log cannot be folded in: %d %v", busy, err)
+			}
+		}
+		return nil
+	})
+	if err != nil || n != 3*pageRows+10 {
+		t.Errorf("%d readings, %v", n, err)
+	}
+}
+
 // Old seconds become minutes: nothing of them is unaccounted for, and it is
 // told.
 func TestThinning(t *testing.T) {
@@ -408,6 +456,25 @@ func TestThinning(t *testing.T) {
 	}
 	if got := (p1 - p0) / float64(t1-t0) * 1000; math.Abs(got-3.2) > 1e-9 {
 		t.Errorf("phase of a minute grows by %v cycles a second", got)
+	}
+	got, inStates := Minute{}, 0
+	err = j.Reader().Minutes(context.Background(), "counter", time.Unix(0, 0), last, func(m Minute) error {
+		if got.Seconds++; got.Seconds == 6 {
+			got.Beat, got.FirstPhase, got.LastPhase, got.FirstPhaseAt, got.LastPhaseAt = m.Beat, m.FirstPhase, m.LastPhase, m.FirstPhaseAt, m.LastPhaseAt
+		}
+		got.Usable += m.Usable
+		for _, n := range m.States {
+			inStates += n
+		}
+		return nil
+	})
+	if err != nil || got.Seconds != rows || got.Usable != usable || inStates != seconds || math.Abs(got.Beat-3.2) > 1e-3 ||
+		got.FirstPhase != p0 || got.LastPhase != p1 || got.FirstPhaseAt.UnixMilli() != t0 || got.LastPhaseAt.UnixMilli() != t1 {
+		t.Errorf("read as minutes: %d with %d usable and %d in states, %+v, %v", got.Seconds, got.Usable, inStates, got, err)
+	}
+	first, end, ok, err := j.Reader().MinutesExtent(context.Background(), "counter", time.Unix(0, 0), last)
+	if err != nil || !ok || !first.Equal(begin.Truncate(time.Minute)) || end.Sub(first) != time.Duration(rows-1)*time.Minute {
+		t.Errorf("minutes from %v to %v, %v %v", first, end, ok, err)
 	}
 	ev, err := j.Reader().Events(context.Background(), "counter", time.Unix(0, 0), time.Now().Add(time.Hour))
 	if err != nil || len(ev) == 0 || ev[0].Kind != Thinned {
