@@ -21,11 +21,12 @@ func (e *twoTone) fade(mid float64) {
 		return
 	}
 	guess := model{l.at, l.phase, l.f, l.c, l.amp, l.uf}
-	slope, us := e.anchor.drift(mid)
+	slope, us := e.drift(mid)
 	dt := mid - e.sm.loc.at
 	turning := dt > 5 || math.Abs(guess.f-e.sm.loc.f-slope*dt) > 0.008+5*l.uf+3*us*dt
 	e.sm.loc, e.sm.span, e.sm.lever = guess, 1, 0
 	e.sm.moving(turning)
+	e.sm.rest.follow(mid, l.f, l.uf)
 	if turning {
 		e.sm.note(nil, mid)
 		if c.live {
@@ -68,6 +69,18 @@ func (e *twoTone) keepSlow() {
 		e.slow.aim(sum / n)
 	}
 	e.slow.advance(e.bands[0])
+}
+
+// drift returns how fast the receiver drifts at time t, Hz/s, and how well that
+// is known: by the carrier, or better by the local, which does not fade.
+func (e *twoTone) drift(t float64) (slope, u float64) {
+	slope, u = e.anchor.drift(t)
+	if r := &e.sm.rest; r.known {
+		if s, us := r.drift(t); us < u {
+			return s, us
+		}
+	}
+	return slope, u
 }
 
 // near reports whether both tones fit into the slow ring.
@@ -173,6 +186,9 @@ func (e *twoTone) followSpread(mid float64) bool {
 	l.phase = m.turnsAt(mid)
 	l.whole, l.tail = true, true
 	l.seen++
+	if e.sm.span >= 8 {
+		e.sm.rest.follow(mid, l.f, l.uf)
+	}
 	e.takeSmeared(c, l, b, x.haze.mu, mid)
 	return true
 }
@@ -181,14 +197,14 @@ func (e *twoTone) followSpread(mid float64) bool {
 func (e *twoTone) seekLocal(b *band, l *track, end float64) seek {
 	g := b.gain(l.f - b.centre)
 	carrier, _ := e.anchor.when(end)
-	slope, us := e.anchor.drift(end)
-	x := seek{end: end, amp: e.memory.ampL * g, slope: slope, us: us}
+	x := seek{end: end, amp: e.memory.ampL * g}
+	x.slope, x.us = e.drift(end)
 	x.lo, x.hi = 0.6*x.amp, 1.6*x.amp
 	// A little more smear than was seen: its skirts must not pass for the line.
-	x.haze = haze{1.5 * e.sm.slowly, 1.25*e.sm.sigma + 0.02, carrier, max(l.noise*g*g, 1e-12*x.amp*x.amp)}
-	x.f, x.reach = e.sm.loc.when(end), 0.7
+	x.haze = haze{e.sm.slowly, 1.25*e.sm.sigma + 0.02, carrier, max(l.noise*g*g, 1e-12*x.amp*x.amp)}
+	x.f, x.reach, x.held = e.sm.loc.when(end), 0.7, true
 	if e.sm.span == 0 { // anywhere about the carrier
-		x.f, x.reach = carrier, 6
+		x.f, x.reach, x.held = carrier, farReach, false
 	}
 	return x
 }
@@ -238,8 +254,13 @@ func (e *twoTone) hide(b *band, l *track, mid float64) bool {
 	} else {
 		e.dim = 0
 	}
-	if e.lostLine > 150 || e.dim > 5 {
-		e.hidden, e.merged, e.local, e.lostLine, e.dim = false, false, -1, 0, 0
+	if e.sm.absent {
+		e.gone++
+	} else {
+		e.gone = 0
+	}
+	if e.lostLine > 1200 || e.dim > 5 || e.gone > 20 {
+		e.hidden, e.merged, e.local, e.lostLine, e.dim, e.gone = false, false, -1, 0, 0, 0
 		e.sm.forget()
 		e.memory.known = false
 		for k := range e.tr {

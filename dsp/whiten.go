@@ -24,6 +24,7 @@ type whitener struct {
 	n       int
 	err     float64 // power of what is let through
 	v       []complex128
+	q, g    []float64 // running sums, of bears
 	dt      float64
 	stretch *stretch
 }
@@ -184,4 +185,63 @@ func (w *whitener) refine(f, c, c0, uc float64) (f1, c1, uf float64, b complex12
 		}
 	}
 	return f, c, uf, b
+}
+
+// bears reports whether every part of the stretch that could contradict a line
+// of complex amplitude b bears it out: no first nor last seconds speak plainly
+// against it, and the latest that can tell speak for it. A line that has left,
+// or that stood elsewhere at first, has the long span's whole gain from seconds
+// in which it was there; each sample's log-likelihood tells (Page's cumulative
+// sum, Biometrika 1954, from memory). The level is left free from lo to hi.
+func (w *whitener) bears(f, c float64, b complex128, lo, hi float64) bool {
+	m := cmplx.Abs(b)
+	if m == 0 || len(w.v) == 0 {
+		return false
+	}
+	st := w.stretch
+	unit := b / complex(m, 0)
+	h := w.gain(f)
+	bends := math.Abs(c)*st.half > 0.05
+	e, r, rr := chirped(f, c, st.t0, st.dt)
+	w.q, w.g = resize(w.q, len(w.v)+1), resize(w.g, len(w.v)+1)
+	w.q[0], w.g[0] = 0, 0
+	for i, v := range w.v {
+		if bends && i%8 == 0 {
+			h = w.gain(f + c*(st.t0+float64(i)*st.dt))
+		}
+		q, g := 0.0, 0.0
+		if v != 0 {
+			q = real(v*cmplx.Conj(e*h*unit)) / w.err
+			g = (real(h)*real(h) + imag(h)*imag(h)) / w.err
+		}
+		w.q[i+1], w.g[i+1] = w.q[i]+q, w.g[i]+g
+		e *= r
+		r *= rr
+	}
+	// The gain of part i..j by the level that suits it best.
+	part := func(i, j int) (gain, most float64) {
+		q, g := w.q[j]-w.q[i], w.g[j]-w.g[i]
+		if g <= 0 {
+			return 0, 0
+		}
+		a := max(lo, min(hi, q/g))
+		return 2*a*q - a*a*g, m * m * g
+	}
+	n := len(w.v)
+	least := min(n, int(math.Ceil(1/st.dt)))
+	asked := false
+	for k := least; k <= n; k++ {
+		head, _ := part(0, k)
+		tail, most := part(n-k, n)
+		if head < -unlike || tail < -unlike {
+			return false
+		}
+		if !asked && most > telling {
+			if tail <= 0 {
+				return false
+			}
+			asked = true
+		}
+	}
+	return true
 }
