@@ -47,6 +47,7 @@ type smear struct {
 	absent bool    // no line of the local's level stands anywhere, though it would show
 	rest   anchor  // the local's own frequency, and with it the receiver's drift
 	lever  float64 // share of the density at the local's frequency that its fit took away in the latest second, 1/s
+	info   float64 // log-likelihood that the line of that fit is worth
 
 	mean   float64 // carrier - local in the audio, Hz, smoothed
 	beat   float64 // the same in the latest second alone, NaN: not known

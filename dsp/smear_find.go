@@ -149,9 +149,6 @@ func (s *smear) find(b *band, x *seek) bool {
 	s.absent = false
 	for span := 2.0; span <= longSpan; span *= 2 {
 		h, ok := s.try(b, span, x)
-		if span > farSpan && h.info > 3*telling && h.score <= 0 {
-			s.absent = true
-		}
 		if !ok {
 			continue
 		}
@@ -173,7 +170,7 @@ func (s *smear) find(b *band, x *seek) bool {
 	s.absent = false
 	s.moving(best.span <= 4)
 	s.loc, s.span = best.m, best.span
-	s.lever = leverage(best.span)
+	s.lever, s.info = leverage(best.span), best.info
 	return true
 }
 
@@ -206,8 +203,13 @@ func (s *smear) try(b *band, span float64, x *seek) (hit, bool) {
 	plan := s.search.filter(w, len(st.z))
 	at, bend, cells := s.scan(plan, span, f0, reach, x, &out)
 	out.next = s.search.rival(st.dt, at, 1.6/span, f0, reach)
-	_, g := w.match(f0, 0)
-	out.info = x.amp * x.amp * g
+	out.info = x.amp * x.amp * w.power(at)
+	if span > farSpan && out.score <= 0 && out.info > 3*telling {
+		s.absent = true
+	}
+	if out.info < telling { // the smear's own tops reach as high
+		return out, false
+	}
 	if x.held && out.turn == 0 {
 		if out.score < 6 || out.next > out.score+4 {
 			return out, false

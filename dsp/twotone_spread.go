@@ -179,8 +179,11 @@ func (e *twoTone) followSpread(mid float64) bool {
 		e.count.broken()
 		e.jumped = true
 	}
-	e.lostLine, e.hits, e.hidden, e.merged = 0, 0, false, false
 	m := &e.sm.loc
+	if e.hidden {
+		e.sm.mean = x.haze.mu - m.when(end)
+	}
+	e.lostLine, e.hits, e.hidden, e.merged = 0, 0, false, false
 	l.live, l.band = true, b
 	l.f, l.c, l.at, l.amp, l.uf = m.when(mid), m.c, mid, m.amp, m.uf
 	l.phase = m.turnsAt(mid)
@@ -311,7 +314,7 @@ func (e *twoTone) remember(mid float64) {
 	c, l, m := &e.tr[1-e.local], &e.tr[e.local], &e.memory
 	m.at, m.carrier, m.local = mid, c.f, l.f
 	m.ampC += 0.05 * (c.amp - m.ampC)
-	if r := l.amp / m.ampL; e.sm.span >= 8 && r > 0.85 && r < 1.18 {
+	if r := l.amp / m.ampL; e.sm.info > 4*telling && r > 0.85 && r < 1.18 {
 		m.ampL += 0.05 * (l.amp - m.ampL)
 	}
 	if !math.IsNaN(e.sm.beat) {

@@ -120,6 +120,18 @@ func (w *whitener) match(f, c float64) (q complex128, g float64) {
 	return sum / complex(w.err, 0), g / w.err
 }
 
+// power returns the matched sum's g for a line at f that rests.
+func (w *whitener) power(f float64) float64 {
+	n := 0
+	for _, v := range w.v {
+		if v != 0 {
+			n++
+		}
+	}
+	h := w.gain(f)
+	return float64(n) * (real(h)*real(h) + imag(h)*imag(h)) / w.err
+}
+
 // score returns the log-likelihood gained by a line at f, chirp c, of an
 // amplitude between lo and hi, and that line's complex amplitude.
 func (w *whitener) score(f, c, lo, hi float64) (gain float64, b complex128) {
