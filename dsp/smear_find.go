@@ -25,6 +25,7 @@ type seek struct {
 	lo, hi    float64
 	f, reach  float64 // expected at end, audio Hz, and how far from there to look
 	held      bool    // the line was there a second ago: another place must be plainly better
+	uf        float64 // how well f is known then
 	slope, us float64 // the receiver's drift
 }
 
@@ -147,6 +148,7 @@ func (q *search) rival(dt, f, guard, f0, reach float64) float64 {
 func (s *smear) find(b *band, x *seek) bool {
 	var best hit
 	s.absent = false
+	x.haze.power = s.crowd(x)
 	for span := 2.0; span <= longSpan; span *= 2 {
 		h, ok := s.try(b, span, x)
 		if !ok {
@@ -193,7 +195,6 @@ func (s *smear) try(b *band, span float64, x *seek) (hit, bool) {
 	s.straighten(x.slope)
 	h := x.haze
 	h.mu -= x.slope*d + centre
-	h.power = s.crowd(h.power, x, span)
 	order := int(min(maxOrder, max(8, 1.2/(max(h.sigma, 1e-3)*st.dt)), float64(len(st.z)/4)))
 	w := &s.white
 	w.set(h, st.dt, order)
@@ -210,11 +211,9 @@ func (s *smear) try(b *band, span float64, x *seek) (hit, bool) {
 	if out.info < telling { // the smear's own tops reach as high
 		return out, false
 	}
-	if x.held && out.turn == 0 {
-		if out.score < 6 || out.next > out.score+4 {
-			return out, false
-		}
-	} else if out.score < 8+math.Log(cells) || out.score-out.next < 6 {
+	stays := x.held && out.turn == 0 && out.score >= 6 && out.next <= out.score+4
+	plain := out.score >= 8+math.Log(cells) && out.score-out.next >= 6
+	if !stays && !plain {
 		return out, false
 	}
 	uc := math.Hypot(x.us, 1e-6)
@@ -224,6 +223,9 @@ func (s *smear) try(b *band, span float64, x *seek) (hit, bool) {
 	}
 	f, c, uf, amp := w.refine(at, bend, c0, uc)
 	if amp == 0 || math.Abs(f-at) > 1/span {
+		return out, false
+	}
+	if d := math.Abs(f - f0 + c*d); !plain && d > 4*math.Hypot(x.uf, uf)+1e-3 {
 		return out, false
 	}
 	if !w.bears(f, c, amp, x.lo, x.hi) {
@@ -247,7 +249,7 @@ func (s *smear) scan(plan *fourier.CmplxFFT, span, f0, reach float64, x *seek, o
 	cells = max(2, 2*reach*span)
 	near, best := reach, math.Inf(-1)
 	if x.held { // first where it should be
-		near = min(reach, 0.05+1/span)
+		near = min(reach, 4*x.uf+0.5/span)
 	}
 	step := 2.4 / (span * span) // moves the ends by 0.3 turns
 	k := min(6, int(math.Ceil(2*x.us/step-0.5)))
@@ -291,15 +293,20 @@ func (s *smear) straighten(slope float64) {
 	}
 }
 
-// crowd returns the power of the smear to reckon with: what it was when it was
-// clear, and what is there now beside the local's and the noise's.
-func (s *smear) crowd(was float64, x *seek, span float64) float64 {
-	st := &s.st
-	p := 0.0
-	for _, z := range st.z {
+// crowd returns the power of the smear to reckon with: what is there besides
+// the local's and the noise's, over as long as can be, for a short span in a fade
+// knows nothing of the peaks to come.
+func (s *smear) crowd(x *seek) float64 {
+	st, was := &s.st, x.haze.power
+	const rate = 12
+	s.slow.fetch(st, x.end, longSpan, x.haze.mu, longSpan*rate)
+	p, have := 0.0, 0.0
+	for i, z := range st.z {
 		p += real(z)*real(z) + imag(z)*imag(z)
+		have += st.w[i]
 	}
-	p = p/max(1, st.valid*float64(len(st.z))) - x.amp*x.amp - x.haze.n0/st.dt
-	p = max(0.2*was, min(4*was, p))
-	return 1.3 * (20*was + span*p) / (20 + span)
+	p = p/max(1, have) - x.amp*x.amp - x.haze.n0/st.dt
+	p = max(0.3*was, min(3*was, p))
+	have *= st.dt
+	return 1.3 * (20*was + have*p) / (20 + have)
 }

@@ -206,6 +206,7 @@ func (e *twoTone) seekLocal(b *band, l *track, end float64) seek {
 	// A little more smear than was seen: its skirts must not pass for the line.
 	x.haze = haze{e.sm.slowly, 1.25*e.sm.sigma + 0.02, carrier, max(l.noise*g*g, 1e-12*x.amp*x.amp)}
 	x.f, x.reach, x.held = e.sm.loc.when(end), 0.7, true
+	x.uf = e.sm.loc.uf * (1 + 2*math.Abs(end-e.sm.loc.at)/max(1, e.sm.span))
 	if e.sm.span == 0 { // anywhere about the carrier
 		x.f, x.reach, x.held = carrier, farReach, false
 	}
