@@ -26,6 +26,43 @@ func (m *model) turnsAt(t float64) float64 {
 
 func (m *model) when(t float64) float64 { return m.f + m.c*(t-m.at) }
 
+const homeSpan = 100.0 // s over which a smeared carrier's place is averaged
+
+// home is a smeared carrier's mean place in the audio, weighted by its power:
+// one that is taken along by the receiver's drift alone.
+type home struct {
+	at, f, w float64 // s, audio Hz, weight in seconds of ordinary power; 0: not known
+	misses   int
+}
+
+// add takes the carrier's frequency f at time t, of a power by the usual one.
+func (h *home) add(t, f, power, slope, far float64) {
+	if h.w > 0 && t-h.at < 300 {
+		h.f, h.w = h.when(t, slope), h.w*math.Exp(-(t-h.at)/homeSpan)
+		if h.misses++; math.Abs(f-h.f) < far {
+			h.misses = 0
+		}
+		if h.misses >= 3 { // the receiver was tuned
+			h.w = 0
+		} else if h.misses > 0 {
+			power = 0
+		}
+	} else {
+		h.w = 0
+	}
+	h.at = t
+	if h.w == 0 {
+		h.misses = 0
+		h.f, h.w = f, max(power, 0.1)
+		return
+	}
+	power = min(power, 3)
+	h.w += power
+	h.f += (f - h.f) * power / h.w
+}
+
+func (h *home) when(t, slope float64) float64 { return h.f + slope*(t-h.at) }
+
 // smear looks at a carrier that fades. The local's line, which does not, is
 // found by generalised least squares in the carrier's own smear, over as many
 // seconds as that takes, and taken away; what is left is seen in the local's
@@ -46,6 +83,7 @@ type smear struct {
 	still  int     // seconds since it did
 	absent bool    // no line of the local's level stands anywhere, though it would show
 	rest   anchor  // the local's own frequency, and with it the receiver's drift
+	home   home    // where the carrier stands on the whole
 	lever  float64 // share of the density at the local's frequency that its fit took away in the latest second, 1/s
 	info   float64 // log-likelihood that the line of that fit is worth
 
@@ -73,6 +111,7 @@ func newSmear(s *slow) *smear {
 // forget starts afresh, as when the pair is lost.
 func (s *smear) forget() {
 	s.span, s.beat, s.sigma, s.slowly, s.steady = 0, math.NaN(), math.NaN(), 0, math.NaN()
+	s.home = home{}
 	s.ring = [len(s.ring)]complex128{}
 }
 

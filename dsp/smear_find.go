@@ -8,14 +8,19 @@ import (
 )
 
 const (
-	longSpan  = 128.0 // the longest stretch over which the local's line is fitted, s
+	longSpan  = 384.0 // the longest stretch over which the local's line is fitted, s
+	crowdSpan = 128.0 // over which the smear's power is taken, s
 	farReach  = 10.0  // how far from the carrier a lost local is looked for, Hz
 	farSpan   = 16.0  // the longest stretch that takes, s: beyond, it is in the smear
 	unlike    = 8.0   // log-likelihood by which a part of the span may speak against the line
 	telling   = 16.0  // log-likelihood that the latest seconds must be able to give to be asked
 	steps     = 0.35  // of the search, by the resolution 1/span
-	turnSteps = 8     // chirps tried to either side, of a line that is turned
+	turnMost  = 0.6   // the fastest turn of a trimmer, Hz/s
 )
+
+// ladder is the spans that are tried, s: in the smear it is the longest that
+// count, and a finer step finds the line sooner.
+var ladder = [...]float64{2, 4, 8, 16, 32, 48, 64, 96, 128, 192, 256, longSpan}
 
 // seek says where to look for the local's line.
 type seek struct {
@@ -149,7 +154,7 @@ func (s *smear) find(b *band, x *seek) bool {
 	var best hit
 	s.absent = false
 	x.haze.power = s.crowd(x)
-	for span := 2.0; span <= longSpan; span *= 2 {
+	for _, span := range ladder {
 		h, ok := s.try(b, span, x)
 		if !ok {
 			continue
@@ -157,7 +162,8 @@ func (s *smear) find(b *band, x *seek) bool {
 		if best.span > 0 {
 			f1, u1 := best.at(x.end)
 			f2, u2 := h.at(x.end)
-			if math.Abs(f1-f2) > 4*math.Hypot(u1, u2)+1e-3 && h.score < best.score {
+			// The latest seconds know better, if they know.
+			if math.Abs(f1-f2) > 4*math.Hypot(u1, u2)+1e-3 && (h.score < best.score || best.score > 100) {
 				continue
 			}
 		}
@@ -184,7 +190,7 @@ func (s *smear) try(b *band, span float64, x *seek) (hit, bool) {
 		centre, reach = x.haze.mu, min(reach, 4*x.haze.sigma+0.5)
 	}
 	half := math.Abs(x.haze.mu-centre) + reach + 3.5*x.haze.sigma + 0.5
-	rate := min(s.slow.rate, 2.2*half)
+	rate := min(s.slow.rate, max(2.2*half, 32/span))
 	n := int(span * rate)
 	st := &s.st
 	s.slow.fetch(st, x.end, span, centre, n)
@@ -264,9 +270,11 @@ func (s *smear) scan(plan *fourier.CmplxFFT, span, f0, reach float64, x *seek, o
 	if span > 4 {
 		return at, bend, cells
 	}
-	for j := -turnSteps; j <= turnSteps; j++ {
-		c := float64(j) * 0.25 / (span * span)
-		if j == 0 || math.Abs(c) > 0.6 {
+	step = 0.25 / (span * span)
+	k = int(turnMost / step)
+	for j := -k; j <= k; j++ {
+		c := float64(j) * step
+		if j == 0 {
 			continue
 		}
 		if f, g := s.search.score(plan, w, c, x, f0, reach, reach); g > best+4 && g > out.score {
@@ -274,7 +282,7 @@ func (s *smear) scan(plan *fourier.CmplxFFT, span, f0, reach float64, x *seek, o
 		}
 	}
 	if out.turn != 0 {
-		cells *= 2*turnSteps + 1
+		cells *= float64(2*k + 1)
 	}
 	return at, bend, cells
 }
@@ -299,7 +307,7 @@ func (s *smear) straighten(slope float64) {
 func (s *smear) crowd(x *seek) float64 {
 	st, was := &s.st, x.haze.power
 	const rate = 12
-	s.slow.fetch(st, x.end, longSpan, x.haze.mu, longSpan*rate)
+	s.slow.fetch(st, x.end, crowdSpan, x.haze.mu, crowdSpan*rate)
 	p, have := 0.0, 0.0
 	for i, z := range st.z {
 		p += real(z)*real(z) + imag(z)*imag(z)

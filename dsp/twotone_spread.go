@@ -118,6 +118,14 @@ func (e *twoTone) lookBeside(c *track, mid float64) {
 			w = 1
 		}
 		e.sm.mean += w * (e.sm.beat - e.sm.mean)
+		if e.sm.slowly > 0 {
+			slope, _ := e.drift(mid)
+			f, far := e.sm.loc.when(mid)+e.sm.beat, 1.0
+			if e.sm.sigma > 0.1 {
+				far = 10 * e.sm.sigma
+			}
+			e.sm.home.add(mid, f, e.sm.power/e.sm.slowly, slope, far)
+		}
 	}
 	g := b.gain(e.sm.loc.f + want - b.centre)
 	a2 := e.sm.loc.amp * e.sm.loc.amp
@@ -199,9 +207,12 @@ func (e *twoTone) followSpread(mid float64) bool {
 // seekLocal says where the local's line is to be looked for.
 func (e *twoTone) seekLocal(b *band, l *track, end float64) seek {
 	g := b.gain(l.f - b.centre)
-	carrier, _ := e.anchor.when(end)
 	x := seek{end: end, amp: e.memory.ampL * g}
 	x.slope, x.us = e.drift(end)
+	carrier, _ := e.anchor.when(end)
+	if h := &e.sm.home; h.w > 0 {
+		carrier = h.when(end, x.slope)
+	}
 	x.lo, x.hi = 0.6*x.amp, 1.6*x.amp
 	// A little more smear than was seen: its skirts must not pass for the line.
 	x.haze = haze{e.sm.slowly, 1.25*e.sm.sigma + 0.02, carrier, max(l.noise*g*g, 1e-12*x.amp*x.amp)}

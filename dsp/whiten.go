@@ -5,7 +5,10 @@ import (
 	"math/cmplx"
 )
 
-const maxOrder = 64
+const (
+	maxOrder   = 64
+	phaseSlack = 0.3 // rad by which a line may run out of phase over a span
+)
 
 // haze is what lies around a line as Gaussian noise: a carrier smeared by
 // fading (power, rms width and middle of a Gaussian Doppler spectrum) and white
@@ -24,7 +27,8 @@ type whitener struct {
 	n       int
 	err     float64 // power of what is let through
 	v       []complex128
-	q, g    []float64 // running sums, of bears
+	q       []complex128 // running sums, of bears
+	g       []float64
 	dt      float64
 	stretch *stretch
 }
@@ -221,31 +225,34 @@ func (w *whitener) bears(f, c float64, b complex128, lo, hi float64) bool {
 		if bends && i%8 == 0 {
 			h = w.gain(f + c*(st.t0+float64(i)*st.dt))
 		}
-		q, g := 0.0, 0.0
+		q, g := complex128(0), 0.0
 		if v != 0 {
-			q = real(v*cmplx.Conj(e*h*unit)) / w.err
+			q = v * cmplx.Conj(e*h*unit) / complex(w.err, 0)
 			g = (real(h)*real(h) + imag(h)*imag(h)) / w.err
 		}
 		w.q[i+1], w.g[i+1] = w.q[i]+q, w.g[i]+g
 		e *= r
 		r *= rr
 	}
-	// The gain of part i..j by the level that suits it best.
-	part := func(i, j int) (gain, most float64) {
+	// The gain of part i..j by the level that suits it best, what the line would
+	// gain there, and whether it stands there in phase.
+	part := func(i, j int) (gain, most float64, inPhase bool) {
 		q, g := w.q[j]-w.q[i], w.g[j]-w.g[i]
 		if g <= 0 {
-			return 0, 0
+			return 0, 0, true
 		}
-		a := max(lo, min(hi, q/g))
-		return 2*a*q - a*a*g, m * m * g
+		a := max(lo, min(hi, real(q)/g))
+		most = m * m * g
+		return 2*a*real(q) - a*a*g, most, most < telling ||
+			math.Abs(cmplx.Phase(q)) < phaseSlack+3.5/math.Sqrt(2*most)
 	}
 	n := len(w.v)
 	least := min(n, int(math.Ceil(1/st.dt)))
 	asked := false
 	for k := least; k <= n; k++ {
-		head, _ := part(0, k)
-		tail, most := part(n-k, n)
-		if head < -unlike || tail < -unlike {
+		head, _, headIn := part(0, k)
+		tail, most, tailIn := part(n-k, n)
+		if head < -unlike || tail < -unlike || !headIn || !tailIn {
 			return false
 		}
 		if !asked && most > telling {
