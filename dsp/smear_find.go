@@ -148,8 +148,8 @@ func (q *search) rival(dt, f, guard, f0, reach float64) float64 {
 	return next
 }
 
-// find looks for the local's line over spans from 2 s up and takes the longest
-// whose answer the shorter ones do not contradict.
+// find looks for the local's line over spans from 2 s up and takes the one that
+// gains most by it.
 func (s *smear) find(b *band, x *seek) bool {
 	var best hit
 	s.absent = false
@@ -163,7 +163,8 @@ func (s *smear) find(b *band, x *seek) bool {
 			f1, u1 := best.at(x.end)
 			f2, u2 := h.at(x.end)
 			// The latest seconds know better, if they know.
-			if math.Abs(f1-f2) > 4*math.Hypot(u1, u2)+1e-3 && (h.score < best.score || best.score > 100) {
+			moved := math.Abs(f1-f2) > 4*math.Hypot(u1, u2)+1e-3
+			if h.score < best.score || moved && best.score > 100 {
 				continue
 			}
 		}
@@ -234,6 +235,11 @@ func (s *smear) try(b *band, span float64, x *seek) (hit, bool) {
 	if d := math.Abs(f - f0 + c*d); !plain && d > 4*math.Hypot(x.uf, uf)+1e-3 {
 		return out, false
 	}
+	// A line of the local's level gains what it is worth, give or take the level.
+	level, most := cmplx.Abs(amp)/x.amp, 2/math.Sqrt(2*out.info)
+	if level < 0.65-most || level > 1.5+most || out.score < 0.3*out.info-6 {
+		return out, false
+	}
 	if !w.bears(f, c, amp, x.lo, x.hi) {
 		return out, false
 	}
@@ -258,7 +264,7 @@ func (s *smear) scan(plan *fourier.CmplxFFT, span, f0, reach float64, x *seek, o
 		near = min(reach, 4*x.uf+0.5/span)
 	}
 	step := 2.4 / (span * span) // moves the ends by 0.3 turns
-	k := min(6, int(math.Ceil(2*x.us/step-0.5)))
+	k := min(8, int(math.Ceil(2*x.us/step-0.5)))
 	for j := -k; j <= k; j++ {
 		f, g := s.search.score(plan, w, float64(j)*step, x, f0, reach, near)
 		if g > best {

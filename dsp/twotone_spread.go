@@ -197,7 +197,7 @@ func (e *twoTone) followSpread(mid float64) bool {
 	l.phase = m.turnsAt(mid)
 	l.whole, l.tail = true, true
 	l.seen++
-	if e.sm.span >= 8 {
+	if e.sm.span <= 16 && e.sm.span >= 8 { // longer ones share most of their seconds
 		e.sm.rest.follow(mid, l.f, l.uf)
 	}
 	e.takeSmeared(c, l, b, x.haze.mu, mid)
