@@ -67,6 +67,21 @@ func (a *anchor) begin(t, f, u float64) {
 	*a = anchor{known: true, at: t, hz: f, p00: u*u + s*s + 1e-8, p11: firstDrift * firstDrift, scatter: s}
 }
 
+// follow is add for a tone that may be turned by hand: where it leaves its way,
+// it begins there anew with the drift that was known.
+func (a *anchor) follow(t, f, u float64) {
+	if a.known && t > a.at && t-a.at <= 300 {
+		want, uw := a.when(t)
+		if math.Abs(f-want) > 5*math.Hypot(u, uw) {
+			a.advance(t - a.at)
+			a.hz, a.p00, a.p01 = f, 1, 0
+			return
+		}
+	}
+	a.add(t, f, u)
+	a.scatter = 0 // it stands still
+}
+
 func (a *anchor) walk() float64 {
 	q := driftWalk + driftShare*math.Abs(a.slope)
 	return q * q

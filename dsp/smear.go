@@ -6,7 +6,6 @@ import (
 )
 
 const (
-	longSpan    = 128.0 // the longest stretch over which the local's line is fitted, s
 	phasorRate  = 10    // phasors of the carrier kept a second
 	phasorSpan  = 120   // s
 	spreadLeast = 0.015 // Hz: a narrower carrier is a line
@@ -27,6 +26,43 @@ func (m *model) turnsAt(t float64) float64 {
 
 func (m *model) when(t float64) float64 { return m.f + m.c*(t-m.at) }
 
+const homeSpan = 100.0 // s over which a smeared carrier's place is averaged
+
+// home is a smeared carrier's mean place in the audio, weighted by its power:
+// one that is taken along by the receiver's drift alone.
+type home struct {
+	at, f, w float64 // s, audio Hz, weight in seconds of ordinary power; 0: not known
+	misses   int
+}
+
+// add takes the carrier's frequency f at time t, of a power by the usual one.
+func (h *home) add(t, f, power, slope, far float64) {
+	if h.w > 0 && t-h.at < 300 {
+		h.f, h.w = h.when(t, slope), h.w*math.Exp(-(t-h.at)/homeSpan)
+		if h.misses++; math.Abs(f-h.f) < far {
+			h.misses = 0
+		}
+		if h.misses >= 3 { // the receiver was tuned
+			h.w = 0
+		} else if h.misses > 0 {
+			power = 0
+		}
+	} else {
+		h.w = 0
+	}
+	h.at = t
+	if h.w == 0 {
+		h.misses = 0
+		h.f, h.w = f, max(power, 0.1)
+		return
+	}
+	power = min(power, 3)
+	h.w += power
+	h.f += (f - h.f) * power / h.w
+}
+
+func (h *home) when(t, slope float64) float64 { return h.f + slope*(t-h.at) }
+
 // smear looks at a carrier that fades. The local's line, which does not, is
 // found by generalised least squares in the carrier's own smear, over as many
 // seconds as that takes, and taken away; what is left is seen in the local's
@@ -39,11 +75,17 @@ type smear struct {
 	st    stretch
 	white whitener
 
-	span  float64 // stretch of the local's last fit, s; 0: none
-	loc   model
-	turns bool    // seen from a local that turns, the carrier's smear cannot be measured
-	still int     // seconds since it did
-	lever float64 // share of the density at the local's frequency that its fit took away in the latest second, 1/s
+	search search
+
+	span   float64 // stretch of the local's last fit, s; 0: none
+	loc    model
+	turns  bool    // seen from a local that turns, the carrier's smear cannot be measured
+	still  int     // seconds since it did
+	absent bool    // no line of the local's level stands anywhere, though it would show
+	rest   anchor  // the local's own frequency, and with it the receiver's drift
+	home   home    // where the carrier stands on the whole
+	lever  float64 // share of the density at the local's frequency that its fit took away in the latest second, 1/s
+	info   float64 // log-likelihood that the line of that fit is worth
 
 	mean   float64 // carrier - local in the audio, Hz, smoothed
 	beat   float64 // the same in the latest second alone, NaN: not known
@@ -69,147 +111,8 @@ func newSmear(s *slow) *smear {
 // forget starts afresh, as when the pair is lost.
 func (s *smear) forget() {
 	s.span, s.beat, s.sigma, s.slowly, s.steady = 0, math.NaN(), math.NaN(), 0, math.NaN()
+	s.home = home{}
 	s.ring = [len(s.ring)]complex128{}
-}
-
-// seek says where to look for the local's line.
-type seek struct {
-	end       float64 // s
-	haze      haze    // mu in audio Hz at end
-	amp       float64 // the local's level, |z|, and the range it may lie in
-	lo, hi    float64
-	f, reach  float64 // expected at end, audio Hz, and how far from there to look
-	slope, us float64 // the receiver's drift
-}
-
-// hit is a line found over one span.
-type hit struct {
-	m           model
-	span        float64
-	turn        float64 // by how much it bends more than the receiver drifts, Hz/s
-	score, next float64 // log-likelihood gain, and that of the best other place
-}
-
-// at returns the frequency at time t and its uncertainty there.
-func (h *hit) at(t float64) (f, u float64) {
-	return h.m.when(t), h.m.uf * (1 + 2*math.Abs(t-h.m.at)/h.span)
-}
-
-// find looks for the local's line over spans from 2 s up and takes the longest
-// whose answer the shorter ones do not contradict.
-func (s *smear) find(b *band, x *seek) bool {
-	var best hit
-	for span := 2.0; span <= longSpan; span *= 2 {
-		h, ok := s.try(b, span, 0, x)
-		if span <= 4 {
-			if t, turns := s.turning(b, span, x); turns && (!ok || t.score > h.score+4) {
-				h, ok = t, true
-			}
-		}
-		if !ok {
-			if best.span > 0 && span > 4*best.span {
-				break
-			}
-			continue
-		}
-		if best.span > 0 {
-			f1, u1 := best.at(x.end)
-			f2, u2 := h.at(x.end)
-			if math.Abs(f1-f2) > 4*math.Hypot(u1, u2)+1e-3 {
-				continue
-			}
-		}
-		best = h
-	}
-	// In the middle of the smear only a line that rests can be told from its tops.
-	inside := math.Abs(best.m.when(x.end)-x.haze.mu) < 2.5*x.haze.sigma
-	if best.span == 0 || inside && (best.span < 8 || !(s.steady < 0.4 || math.IsNaN(s.steady) && s.sigma > 0.15)) {
-		s.span = 0
-		return false
-	}
-	s.moving(best.span <= 4)
-	s.loc, s.span = best.m, best.span
-	s.lever = leverage(best.span)
-	return true
-}
-
-// turning looks for a line that bends, as a local under trim does.
-func (s *smear) turning(b *band, span float64, x *seek) (hit, bool) {
-	var best hit
-	found := false
-	for k := -8; k <= 8; k++ {
-		c := float64(k) * 0.25 / (span * span)
-		if k == 0 || math.Abs(c) > 0.6 {
-			continue
-		}
-		if h, ok := s.try(b, span, c, x); ok && h.score > best.score {
-			best, found = h, true
-		}
-	}
-	return best, found
-}
-
-// try scores every frequency within reach over one span and refines the best.
-func (s *smear) try(b *band, span, turn float64, x *seek) (hit, bool) {
-	half := math.Abs(x.haze.mu-x.f) + x.reach + 3.5*x.haze.sigma + 0.5
-	rate := min(s.slow.rate, 2.2*half)
-	n := int(span * rate)
-	if n > 2048 {
-		return hit{}, false
-	}
-	centre := x.f
-	s.slow.fetch(&s.st, x.end, span, centre, n)
-	if s.st.valid < 0.95 || len(s.st.z) < 24 {
-		return hit{}, false
-	}
-	d := x.end - s.st.mid
-	h := x.haze
-	h.mu = x.haze.mu - x.slope*d - centre
-	order := int(min(maxOrder, max(8, 1.2/(max(h.sigma, 1e-3)*s.st.dt)), float64(len(s.st.z)/4)))
-	s.white.set(h, s.st.dt, order)
-	s.white.take(&s.st)
-	c := x.slope + turn
-	f0 := -c * d // expected in the middle, if it is at x.f in the end
-	step := 0.35 / span
-	reach := x.reach + 1.5/span
-	var out hit
-	at := 0.0
-	scores := s.dft[:0]
-	for f := f0 - reach; f <= f0+reach; f += step {
-		g, _ := s.white.score(f, c, x.lo, x.hi)
-		scores = append(scores, complex(f, g))
-		if g > out.score {
-			out.score, at = g, f
-		}
-	}
-	for _, v := range scores {
-		if math.Abs(real(v)-at) > 1.6/span {
-			out.next = max(out.next, imag(v))
-		}
-	}
-	s.dft = scores
-	cells := math.Log(max(2, 2*reach*span))
-	if turn != 0 {
-		cells += math.Log(17)
-	}
-	if out.score < 8+cells || out.score-out.next < 6 {
-		return out, false
-	}
-	uc := math.Hypot(x.us, 1e-6)
-	if turn != 0 {
-		uc = 0.3 / (span * span)
-	}
-	f, c2, uf, amp := s.white.refine(at, c, c, uc)
-	if amp == 0 || math.Abs(f-at) > 1/span {
-		return out, false
-	}
-	m := &out.m
-	m.at, m.f, m.c, m.uf = s.st.mid, f+centre, c2, uf
-	m.amp = cmplx.Abs(amp) / b.gain(f+centre-b.centre)
-	osc := b.oscillator(m.at) + (s.slow.centre-b.centre)*m.at
-	m.phase = cphase(amp) + osc + frac1((centre-s.slow.centre)*m.at)
-	out.span, out.turn = span, turn
-	return out, true
 }
 
 // needs returns for how long a local of the given level has to rest in the middle

@@ -39,7 +39,7 @@ func (s *smear) look(l *lens, b *band, mid, want, n0 float64) {
 		s.note(nil, mid)
 		return
 	}
-	s.beat, s.u, s.power, s.powerU = m.mean, m.u, m.power, m.powerU
+	s.beat, s.u, s.power, s.powerU = m.mean, s.doubt(&m), m.power, m.powerU
 	s.phase = cphase(s.at(w, m.mean)) // at the middle, of the second as a whole
 	s.note(w, mid)
 	if !s.turns && s.partial(n0*phasorRate/(s.loc.amp*s.loc.amp)) {
@@ -119,6 +119,17 @@ func (s *smear) moments(w *window, centre, reach, n0 float64) moments {
 	m.mean = centre + mean*step
 	m.u = math.Sqrt(v1+v0*mean*mean) / p0 * step
 	return m
+}
+
+// doubt returns the uncertainty of the second's mean: that of the periodogram,
+// that of the local's frequency, and what is left of the local's line, or taken
+// away with it, beside the carrier's.
+func (s *smear) doubt(m *moments) float64 {
+	u := math.Hypot(m.u, s.loc.uf)
+	if left := s.back() / m.power; left > 0 {
+		u = math.Hypot(u, math.Sqrt(min(1, left))*math.Hypot(s.sigma, m.mean))
+	}
+	return u
 }
 
 // back returns the power that the local's fit has taken from the carrier's

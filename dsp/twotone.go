@@ -66,6 +66,7 @@ type twoTone struct {
 	hits     int  // how often in a row it was found there again, and where
 	hitAt    float64
 	lostLine int // seconds for which the local's line has not been found in the smear
+	gone     int // seconds in a row in which no line of its level stood anywhere
 	dim      int // seconds in a row without the carrier's power beside the local
 }
 

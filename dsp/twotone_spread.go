@@ -21,11 +21,12 @@ func (e *twoTone) fade(mid float64) {
 		return
 	}
 	guess := model{l.at, l.phase, l.f, l.c, l.amp, l.uf}
-	slope, us := e.anchor.drift(mid)
+	slope, us := e.drift(mid)
 	dt := mid - e.sm.loc.at
 	turning := dt > 5 || math.Abs(guess.f-e.sm.loc.f-slope*dt) > 0.008+5*l.uf+3*us*dt
 	e.sm.loc, e.sm.span, e.sm.lever = guess, 1, 0
 	e.sm.moving(turning)
+	e.sm.rest.follow(mid, l.f, l.uf)
 	if turning {
 		e.sm.note(nil, mid)
 		if c.live {
@@ -70,6 +71,18 @@ func (e *twoTone) keepSlow() {
 	e.slow.advance(e.bands[0])
 }
 
+// drift returns how fast the receiver drifts at time t, Hz/s, and how well that
+// is known: by the carrier, or better by the local, which does not fade.
+func (e *twoTone) drift(t float64) (slope, u float64) {
+	slope, u = e.anchor.drift(t)
+	if r := &e.sm.rest; r.known {
+		if s, us := r.drift(t); us < u {
+			return s, us
+		}
+	}
+	return slope, u
+}
+
 // near reports whether both tones fit into the slow ring.
 func (e *twoTone) near(c, l *track) bool {
 	return c.band == l.band && math.Abs(c.f-l.f) < nearTones
@@ -105,6 +118,14 @@ func (e *twoTone) lookBeside(c *track, mid float64) {
 			w = 1
 		}
 		e.sm.mean += w * (e.sm.beat - e.sm.mean)
+		if e.sm.slowly > 0 {
+			slope, _ := e.drift(mid)
+			f, far := e.sm.loc.when(mid)+e.sm.beat, 1.0
+			if e.sm.sigma > 0.1 {
+				far = 10 * e.sm.sigma
+			}
+			e.sm.home.add(mid, f, e.sm.power/e.sm.slowly, slope, far)
+		}
 	}
 	g := b.gain(e.sm.loc.f + want - b.centre)
 	a2 := e.sm.loc.amp * e.sm.loc.amp
@@ -166,13 +187,19 @@ func (e *twoTone) followSpread(mid float64) bool {
 		e.count.broken()
 		e.jumped = true
 	}
-	e.lostLine, e.hits, e.hidden, e.merged = 0, 0, false, false
 	m := &e.sm.loc
+	if e.hidden {
+		e.sm.mean = x.haze.mu - m.when(end)
+	}
+	e.lostLine, e.hits, e.hidden, e.merged = 0, 0, false, false
 	l.live, l.band = true, b
 	l.f, l.c, l.at, l.amp, l.uf = m.when(mid), m.c, mid, m.amp, m.uf
 	l.phase = m.turnsAt(mid)
 	l.whole, l.tail = true, true
 	l.seen++
+	if e.sm.span <= 16 && e.sm.span >= 8 { // longer ones share most of their seconds
+		e.sm.rest.follow(mid, l.f, l.uf)
+	}
 	e.takeSmeared(c, l, b, x.haze.mu, mid)
 	return true
 }
@@ -180,15 +207,19 @@ func (e *twoTone) followSpread(mid float64) bool {
 // seekLocal says where the local's line is to be looked for.
 func (e *twoTone) seekLocal(b *band, l *track, end float64) seek {
 	g := b.gain(l.f - b.centre)
+	x := seek{end: end, amp: e.memory.ampL * g}
+	x.slope, x.us = e.drift(end)
 	carrier, _ := e.anchor.when(end)
-	slope, us := e.anchor.drift(end)
-	x := seek{end: end, amp: e.memory.ampL * g, slope: slope, us: us}
+	if h := &e.sm.home; h.w > 0 {
+		carrier = h.when(end, x.slope)
+	}
 	x.lo, x.hi = 0.6*x.amp, 1.6*x.amp
 	// A little more smear than was seen: its skirts must not pass for the line.
-	x.haze = haze{1.5 * e.sm.slowly, 1.25*e.sm.sigma + 0.02, carrier, max(l.noise*g*g, 1e-12*x.amp*x.amp)}
-	x.f, x.reach = e.sm.loc.when(end), 0.7
+	x.haze = haze{e.sm.slowly, 1.25*e.sm.sigma + 0.02, carrier, max(l.noise*g*g, 1e-12*x.amp*x.amp)}
+	x.f, x.reach, x.held = e.sm.loc.when(end), 0.7, true
+	x.uf = e.sm.loc.uf * (1 + 2*math.Abs(end-e.sm.loc.at)/max(1, e.sm.span))
 	if e.sm.span == 0 { // anywhere about the carrier
-		x.f, x.reach = carrier, 6
+		x.f, x.reach, x.held = carrier, farReach, false
 	}
 	return x
 }
@@ -238,8 +269,13 @@ func (e *twoTone) hide(b *band, l *track, mid float64) bool {
 	} else {
 		e.dim = 0
 	}
-	if e.lostLine > 150 || e.dim > 5 {
-		e.hidden, e.merged, e.local, e.lostLine, e.dim = false, false, -1, 0, 0
+	if e.sm.absent {
+		e.gone++
+	} else {
+		e.gone = 0
+	}
+	if e.lostLine > 1200 || e.dim > 5 || e.gone > 20 {
+		e.hidden, e.merged, e.local, e.lostLine, e.dim, e.gone = false, false, -1, 0, 0, 0
 		e.sm.forget()
 		e.memory.known = false
 		for k := range e.tr {
@@ -290,7 +326,7 @@ func (e *twoTone) remember(mid float64) {
 	c, l, m := &e.tr[1-e.local], &e.tr[e.local], &e.memory
 	m.at, m.carrier, m.local = mid, c.f, l.f
 	m.ampC += 0.05 * (c.amp - m.ampC)
-	if r := l.amp / m.ampL; e.sm.span >= 8 && r > 0.85 && r < 1.18 {
+	if r := l.amp / m.ampL; e.sm.info > 4*telling && r > 0.85 && r < 1.18 {
 		m.ampL += 0.05 * (l.amp - m.ampL)
 	}
 	if !math.IsNaN(e.sm.beat) {

@@ -5,7 +5,10 @@ import (
 	"math/cmplx"
 )
 
-const maxOrder = 64
+const (
+	maxOrder   = 64
+	phaseSlack = 0.3 // rad by which a line may run out of phase over a span
+)
 
 // haze is what lies around a line as Gaussian noise: a carrier smeared by
 // fading (power, rms width and middle of a Gaussian Doppler spectrum) and white
@@ -24,6 +27,8 @@ type whitener struct {
 	n       int
 	err     float64 // power of what is let through
 	v       []complex128
+	q       []complex128 // running sums, of bears
+	g       []float64
 	dt      float64
 	stretch *stretch
 }
@@ -119,6 +124,18 @@ func (w *whitener) match(f, c float64) (q complex128, g float64) {
 	return sum / complex(w.err, 0), g / w.err
 }
 
+// power returns the matched sum's g for a line at f that rests.
+func (w *whitener) power(f float64) float64 {
+	n := 0
+	for _, v := range w.v {
+		if v != 0 {
+			n++
+		}
+	}
+	h := w.gain(f)
+	return float64(n) * (real(h)*real(h) + imag(h)*imag(h)) / w.err
+}
+
 // score returns the log-likelihood gained by a line at f, chirp c, of an
 // amplitude between lo and hi, and that line's complex amplitude.
 func (w *whitener) score(f, c, lo, hi float64) (gain float64, b complex128) {
@@ -184,4 +201,66 @@ func (w *whitener) refine(f, c, c0, uc float64) (f1, c1, uf float64, b complex12
 		}
 	}
 	return f, c, uf, b
+}
+
+// bears reports whether every part of the stretch that could contradict a line
+// of complex amplitude b bears it out: no first nor last seconds speak plainly
+// against it, and the latest that can tell speak for it. A line that has left,
+// or that stood elsewhere at first, has the long span's whole gain from seconds
+// in which it was there; each sample's log-likelihood tells (Page's cumulative
+// sum, Biometrika 1954, from memory). The level is left free from lo to hi.
+func (w *whitener) bears(f, c float64, b complex128, lo, hi float64) bool {
+	m := cmplx.Abs(b)
+	if m == 0 || len(w.v) == 0 {
+		return false
+	}
+	st := w.stretch
+	unit := b / complex(m, 0)
+	h := w.gain(f)
+	bends := math.Abs(c)*st.half > 0.05
+	e, r, rr := chirped(f, c, st.t0, st.dt)
+	w.q, w.g = resize(w.q, len(w.v)+1), resize(w.g, len(w.v)+1)
+	w.q[0], w.g[0] = 0, 0
+	for i, v := range w.v {
+		if bends && i%8 == 0 {
+			h = w.gain(f + c*(st.t0+float64(i)*st.dt))
+		}
+		q, g := complex128(0), 0.0
+		if v != 0 {
+			q = v * cmplx.Conj(e*h*unit) / complex(w.err, 0)
+			g = (real(h)*real(h) + imag(h)*imag(h)) / w.err
+		}
+		w.q[i+1], w.g[i+1] = w.q[i]+q, w.g[i]+g
+		e *= r
+		r *= rr
+	}
+	// The gain of part i..j by the level that suits it best, what the line would
+	// gain there, and whether it stands there in phase.
+	part := func(i, j int) (gain, most float64, inPhase bool) {
+		q, g := w.q[j]-w.q[i], w.g[j]-w.g[i]
+		if g <= 0 {
+			return 0, 0, true
+		}
+		a := max(lo, min(hi, real(q)/g))
+		most = m * m * g
+		return 2*a*real(q) - a*a*g, most, most < telling ||
+			math.Abs(cmplx.Phase(q)) < phaseSlack+3.5/math.Sqrt(2*most)
+	}
+	n := len(w.v)
+	least := min(n, int(math.Ceil(1/st.dt)))
+	asked := false
+	for k := least; k <= n; k++ {
+		head, _, headIn := part(0, k)
+		tail, most, tailIn := part(n-k, n)
+		if head < -unlike || tail < -unlike || !headIn || !tailIn {
+			return false
+		}
+		if !asked && most > telling {
+			if tail <= 0 {
+				return false
+			}
+			asked = true
+		}
+	}
+	return true
 }
