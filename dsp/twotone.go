@@ -24,6 +24,7 @@ type pairMemory struct {
 	carrier, local float64 // Hz
 	ampC, ampL     float64
 	evC, evL       evidence
+	seconds        int // in which both were there
 }
 
 // twoTone holds the carrier's tone and the local's.

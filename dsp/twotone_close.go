@@ -101,6 +101,7 @@ func (e *twoTone) takeClose(y *fitted, b *band, mid, g float64) {
 	}
 	m := &e.memory
 	m.at, m.carrier, m.local = mid, c.f, l.f
+	m.seconds++
 }
 
 // leaning returns the log-odds that tone 0 is the carrier and tone 1 the local

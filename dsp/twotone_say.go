@@ -30,7 +30,8 @@ func (e *twoTone) identify(mid float64) {
 				}
 			}
 			e.anchor.add(mid, c.f, c.uf)
-			e.memory = pairMemory{true, false, mid, c.f, l.f, c.amp, l.amp, c.ev, l.ev}
+			e.memory = pairMemory{known: true, at: mid, carrier: c.f, local: l.f, ampC: c.amp, ampL: l.amp,
+				evC: c.ev, evL: l.ev, seconds: e.memory.seconds + 1}
 		}
 		return
 	}

@@ -62,13 +62,16 @@ func (e *twoTone) spot(mid float64) bool {
 			return false
 		}
 	}
-	if m := &e.memory; m.known && m.evC.seconds >= 10 {
+	if m := &e.memory; m.known && m.seconds >= 10 {
 		// Of a pair that was known the carrier must have been a smeared one, and
 		// the line must be as loud as the local was.
 		level := 20 * math.Log10(math.Sqrt(a2)/m.ampL)
 		if !(e.sm.sigma > wideSpread) || e.sm.steady > 0.4 || math.Abs(level) > 6 {
 			return false
 		}
+	}
+	if !lasts(p.fit.r, n0/st.dt) {
+		return false // a tone that came or went
 	}
 	if e.spotted == 0 || math.Abs(f+st.centre-e.spotAt) > 0.1 {
 		e.spotted = 0
@@ -80,6 +83,20 @@ func (e *twoTone) spot(mid float64) bool {
 	e.spotted = 0
 	e.settle(b, mid, f+st.centre, mean+st.centre, math.Sqrt(a2), far, width, n0)
 	return true
+}
+
+// lasts reports whether what is in r, beside noise of power noise, is there in
+// its first and in its last quarter as in the whole.
+func lasts(r []complex128, noise float64) bool {
+	power := func(z []complex128) (sum float64) {
+		for _, v := range z {
+			sum += real(v)*real(v) + imag(v)*imag(v)
+		}
+		return sum/float64(max(1, len(z))) - noise
+	}
+	q := len(r) / 4
+	least := 0.1 * power(r)
+	return power(r[:q]) > least && power(r[len(r)-q:]) > least
 }
 
 // lineAt fits one line near f in the stretch.
