@@ -13,6 +13,8 @@ const (
 	holdApart = 1.6
 	takeApart = 2.0
 	pull      = 140.0 // how far a beat may lie from its set-off when nothing was told of the tones, Hz
+	hintReach = 30.0  // how far from where it was said to be a local is looked for, Hz
+	nearLevel = 0.003 // of a loud far tone's power, that a near one must have
 	loud      = 100.0 // C/N0, Hz, above which one second is proof enough of a tone
 )
 
@@ -61,7 +63,11 @@ type twoTone struct {
 	hidden   bool // the local's line is somewhere in the smear
 	hits     int  // how often in a row it was found there again, and where
 	hitAt    float64
-	lostLine int // seconds for which the local's line has not been found in the smear
+	lostLine int     // seconds for which the local's line has not been found in the smear
+	focus    float64 // where lines are looked for, audio Hz; 0: everywhere
+	third    float64 // a tone near one of two far apart, and how often it was seen in a row
+	thirdN   int
+	smeared  int // seconds in a row in which the carrier was smeared as a path does it
 	dim      int // seconds in a row without the carrier's power beside the local
 }
 
@@ -123,6 +129,9 @@ func (e *twoTone) second(i int64) Reading {
 		}
 	} else {
 		e.alone = 0
+		if e.held() == 2 && !e.merged && !spread {
+			e.nearer(mid)
+		}
 	}
 	e.identify(mid)
 	switch {
@@ -302,7 +311,12 @@ func (e *twoTone) followOne(b *band, mid float64, k int) {
 	if e.otherBand(b) {
 		need = 1
 	}
-	n := e.scan(b, need)
+	n := 0
+	if lost {
+		n = e.scan(b, need)
+	} else {
+		n = e.scanNear(b, need, t.f)
+	}
 	if n == 0 || (n == 1 && !lost) {
 		if n == 0 {
 			*t = was
@@ -353,7 +367,7 @@ func (e *twoTone) sight(b *band, mid float64, k, ln int) {
 	e.take(b, mid, o, ln)
 	t := &e.tr[o]
 	enough := e.candN >= 2 || (!e.merged && t.cn0() > loud)
-	if !t.whole || !e.tr[k].whole || !enough {
+	if !e.isLine(ln) || !t.whole || !e.tr[k].whole || !enough {
 		e.tr[o] = was
 		e.tr[o].live = false
 		return

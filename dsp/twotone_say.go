@@ -8,6 +8,7 @@ import (
 // identify settles which tone is the local's, where that can be known: by the
 // set-off, by what is remembered of the pair, by the hint.
 func (e *twoTone) identify(mid float64) {
+	e.watch()
 	if e.held() == 2 && !e.merged {
 		a, b := &e.tr[0], &e.tr[1]
 		if !a.whole || !b.whole {
@@ -52,6 +53,18 @@ func (e *twoTone) identify(mid float64) {
 	}
 	if e.held() == 0 {
 		e.local = -1
+	}
+}
+
+// watch counts for how long the carrier has been smeared as Doppler does it:
+// noise through a narrow filter looks like one that is smeared more widely than
+// ordinary paths do, and a weak steady line is narrow only by what of it stands
+// in one line.
+func (e *twoTone) watch() {
+	if e.sm.sigma >= 2*spreadLeast && e.sm.sigma < widestPath && e.sm.steady < 0.9 {
+		e.smeared++
+	} else {
+		e.smeared = 0
 	}
 }
 
@@ -176,9 +189,7 @@ func (e *twoTone) sayBoth(r *Reading, mid, scale float64) {
 		e.sayTone(b, &r.LocalTone, &r.LocalDBFS, &r.LocalCN0, scale)
 		r.Why = ""
 		why, proven := a.ev.carrierLike(&b.ev)
-		// Noise through a narrow filter looks like a carrier that is smeared more
-		// widely than ordinary paths do.
-		if !proven && e.sm.sigma >= 2*spreadLeast && e.sm.sigma < 0.8 {
+		if !proven && e.smeared >= smearedTime {
 			why, proven = "its tone is smeared by Doppler, the other stands still", true
 		}
 		if proven {
