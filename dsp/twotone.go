@@ -364,6 +364,9 @@ func (e *twoTone) sight(b *band, mid float64, k, ln int) {
 	o := 1 - k
 	was := e.tr[o]
 	e.tr[o] = track{live: true, band: b}
+	if mid-was.at < 10 && math.Abs(f-was.f) < 1 { // it is back: what was seen of it still counts
+		e.tr[o].ev, e.tr[o].jit = was.ev, was.jit
+	}
 	e.take(b, mid, o, ln)
 	t := &e.tr[o]
 	enough := e.candN >= 2 || (!e.merged && t.cn0() > loud)
