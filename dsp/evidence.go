@@ -60,10 +60,16 @@ func (e *evidence) carrierLike(local *evidence) (string, bool) {
 	switch {
 	case e.seconds >= sidebandTime && e.mirrored > 0.5 && local.mirrored < 0.3:
 		return "it carries a programme: sidebands in pairs about it", true
-	case e.seconds >= enoughTime && local.seconds >= enoughTime && e.varies > 1 && e.varies > 9*local.varies && e.steps < e.varies:
+	case e.fades(local):
 		return "it fades, and the other tone does not", true
 	}
 	return "", false
+}
+
+// fades reports whether the level wanders as fading makes it, and the other's
+// does not.
+func (e *evidence) fades(other *evidence) bool {
+	return e.seconds >= enoughTime && other.seconds >= enoughTime && e.varies > 1 && e.varies > 9*other.varies && e.steps < e.varies
 }
 
 // ownPair reports whether line k has two sidebands at equal distances to both
@@ -90,7 +96,7 @@ func (l *lens) ownPair(b *band, k, o int, n0 float64) bool {
 		if humBeside(f+b.centre, h) {
 			most = own / 8
 		}
-		if max(up, down) > most || math.Abs(f2)+h > b.half {
+		if max(up, down) > most || ripple(h) || math.Abs(f2)+h > b.half {
 			continue
 		}
 		other := min(s.top(f2+h), s.top(f2-h)) + 4*n0
@@ -107,6 +113,18 @@ func humBeside(f, h float64) bool {
 	for _, hz := range mains {
 		m := math.Round(h / hz)
 		if m >= 1 && math.Abs(h-m*hz) < 1+0.2*m && math.Abs(f-hz*math.Round(f/hz)) < 0.3+0.2*f/hz {
+			return true
+		}
+	}
+	return false
+}
+
+// ripple reports whether sidebands h aside are what a rectifier or a magnetic
+// field puts on an oscillator. Of the multiples of the mains frequency only 100
+// Hz is used by stations too.
+func ripple(h float64) bool {
+	for _, hz := range [...]float64{50, 60, 120} {
+		if math.Abs(h-hz) < 1.5 {
 			return true
 		}
 	}
