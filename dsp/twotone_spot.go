@@ -31,7 +31,7 @@ func (e *twoTone) spot(mid float64) bool {
 	}
 	p.subtract(a, f, c)
 	a2 := real(a)*real(a) + imag(a)*imag(a)
-	n0 := e.floor(b, f+st.centre)
+	n0 := e.floor(b, f+st.centre) // leaves the latest second in the lens
 	// What is left within a hertz of the line is its own unsteadiness, or a
 	// carrier's; further out it is the carrier's, if there is one.
 	y := e.beyond(st, f, n0)
@@ -41,6 +41,9 @@ func (e *twoTone) spot(mid float64) bool {
 	}
 	if far < 20*n0/spotSpan+8*n0*math.Sqrt(2*y.reach/spotSpan) || far < 0.02*a2 || width < 0.15 || width > 4 {
 		return false
+	}
+	if e.humAt(b, f+st.centre-b.centre) || !e.holds(f+st.centre, 1) && !e.holds(mean+st.centre, 1+2*width) {
+		return false // something else than the tones that are held
 	}
 	// The carrier must not be a line of its own, nor one that is being turned.
 	for k := -40; k <= 40; k++ {
@@ -71,6 +74,16 @@ func (e *twoTone) spot(mid float64) bool {
 	e.spotted = 0
 	e.settle(b, mid, f+st.centre, mean+st.centre, math.Sqrt(a2), far, width, n0)
 	return true
+}
+
+// holds reports whether a tone is held within reach of f.
+func (e *twoTone) holds(f, reach float64) bool {
+	for k := range e.tr {
+		if e.tr[k].live && math.Abs(e.tr[k].f-f) < reach {
+			return true
+		}
+	}
+	return false
 }
 
 // smudge is what lies beside a line: its power, mean and rms width within reach
