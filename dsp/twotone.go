@@ -191,7 +191,7 @@ func (e *twoTone) followBoth(b *band, mid float64, own [2]int) {
 	close := math.Min(math.Abs(want[0]-want[1]), math.Abs(old[0].f-old[1].f)) < holdApart+1
 	l.lines = l.lines[:0]
 	n := e.scan(b, 2)
-	if n == 2 && e.followJump(b, mid, own, old, want) {
+	if n == 2 && !e.stranger(b, want) && e.followJump(b, mid, own, old, want) {
 		return
 	}
 	e.tr[own[0]], e.tr[own[1]] = old[0], old[1]

@@ -336,8 +336,11 @@ func (e *twoTone) lookFar(i int64, mid float64) {
 		same = same || math.Abs(f-one.f) < 3
 		apart = apart || math.Abs(f-one.band.centre) > one.band.half
 	}
-	louder := lines[0].amp > 2*one.amp
-	if len(tones) == 2 && same && apart || !same && (louder || len(tones) == 2 && one.amp < 0.3*lines[0].amp) {
+	// A tone that is known is not given up for a louder one.
+	m := &e.memory
+	known := e.local >= 0 || m.known && min(math.Abs(one.f-m.local), math.Abs(one.f-m.carrier)) < 3
+	louder := lines[0].amp > 2*one.amp && !known
+	if len(tones) == 2 && same && apart || !same && (louder || !known && len(tones) == 2 && one.amp < 0.3*lines[0].amp) {
 		local := e.local
 		e.restartWith(i, mid)
 		if t := &e.tr[0]; e.held() == 1 && t.live && local >= 0 && math.Abs(t.f-one.f) < 1 {
@@ -417,4 +420,20 @@ func (e *twoTone) dropFar(k int) {
 func (e *twoTone) isLine(ln int) bool {
 	l := e.lens
 	return power(l.lines[ln].a)*l.win.used/1.5 > 8*l.spec.beside(l.lines[ln].f, 1.2, 4)
+}
+
+// stranger reports whether, of two lines just found where two tones were wanted,
+// one is a tone that was held and the other lies far from both: not the other
+// tone, which is in a fade, but what was beside them all the time.
+func (e *twoTone) stranger(b *band, want [2]float64) bool {
+	for i := range 2 {
+		near := func(k int) float64 {
+			f := e.lens.lines[k].f + b.centre
+			return min(math.Abs(f-want[0]), math.Abs(f-want[1]))
+		}
+		if near(i) < 0.5 && near(1-i) > hintReach {
+			return true
+		}
+	}
+	return false
 }
