@@ -67,6 +67,7 @@ type twoTone struct {
 	focus    float64 // where lines are looked for, audio Hz; 0: everywhere
 	third    float64 // a tone near one of two far apart, and how often it was seen in a row
 	thirdN   int
+	goneN    int // seconds in a row in which one of two close tones was not there
 	smeared  int // seconds in a row in which the carrier was smeared as a path does it
 	dim      int // seconds in a row without the carrier's power beside the local
 }
@@ -112,7 +113,7 @@ func (e *twoTone) second(i int64) Reading {
 	if spread && e.hidden {
 		return e.reading(mid)
 	}
-	if !spread && e.closeBy(mid) && e.followClose(mid) && e.sure {
+	if !spread && e.closeBy(mid) && e.followClose(mid) && e.sure && !e.oneGone(mid) {
 		if math.Abs(e.closest.sep(mid)) > holdApart && e.closest.span <= 8 {
 			e.fade(mid) // is it a carrier that fades?
 		}
@@ -195,7 +196,7 @@ func (e *twoTone) followBoth(b *band, mid float64, own [2]int) {
 		return
 	}
 	e.tr[own[0]], e.tr[own[1]] = old[0], old[1]
-	if close && n > 0 {
+	if close && n > 0 && !e.leftOne(b, old, want) {
 		e.merge(mid, own)
 		return
 	}
