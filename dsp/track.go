@@ -201,7 +201,7 @@ func (l *lens) take(t *track, b *band, mid float64, ln int) {
 	}
 	if t.whole {
 		t.ev.add(20 * math.Log10(cmplx.Abs(x.a)/gain))
-		if len(l.lines) == 2 {
+		if len(l.lines) >= 2 && ln < 2 {
 			t.ev.sidebands(l.ownPair(b, ln, 1-ln, n0))
 		}
 		// an average over about ten seconds

@@ -10,12 +10,13 @@ const (
 	// of difference the joint bound is still within 1.23 of the single one in
 	// the worst phase, at 1.0 it is 2.5 times that (facts of the two-tone
 	// information matrix). New tones have to be further apart to be taken up.
-	holdApart = 1.6
-	takeApart = 2.0
-	pull      = 140.0 // how far a beat may lie from its set-off when nothing was told of the tones, Hz
-	hintReach = 30.0  // how far from where it was said to be a local is looked for, Hz
-	nearLevel = 0.003 // of a loud far tone's power, that a near one must have
-	loud      = 100.0 // C/N0, Hz, above which one second is proof enough of a tone
+	holdApart  = 1.6
+	takeApart  = 2.0
+	pull       = 140.0 // how far a beat may lie from its set-off when nothing was told of the tones, Hz
+	strangeFor = 60.0  // for how long after a pair was held only a tone about where it was is taken for its lost one, s
+	hintReach  = 30.0  // how far from where it was said to be a local is looked for, Hz
+	nearLevel  = 0.003 // of a loud far tone's power, that a near one must have
+	loud       = 100.0 // C/N0, Hz, above which one second is proof enough of a tone
 )
 
 // pairMemory is what is remembered of the two tones once they were known.
@@ -357,6 +358,10 @@ func (e *twoTone) otherBand(b *band) bool { return len(e.bands) > 1 }
 // takes it up when that is enough.
 func (e *twoTone) sight(b *band, mid float64, k, ln int) {
 	f := e.lens.lines[ln].f + b.centre
+	if e.misplaced(f, mid, k) {
+		e.candN = 0
+		return
+	}
 	if e.candN > 0 && math.Abs(f-e.cand) > 2 {
 		e.candN = 0
 	}

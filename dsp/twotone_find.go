@@ -79,8 +79,8 @@ func (e *twoTone) scanNear(b *band, want int, f float64) int {
 		return n
 	}
 	if e.another(b, l.lines[1-far].f) {
-		l.lines[far] = l.lines[2]
-		l.lines = l.lines[:2]
+		// The far one stays in the fit, lest it disturbs the others.
+		l.lines[far], l.lines[2] = l.lines[2], l.lines[far]
 		if l.solve(b, true) {
 			return 2
 		}
@@ -436,4 +436,18 @@ func (e *twoTone) stranger(b *band, want [2]float64) bool {
 		}
 	}
 	return false
+}
+
+// misplaced reports whether a tone at f, audio Hz, seen beside track k, cannot be the
+// one that was held with it a while ago: it lies far from where that would be.
+func (e *twoTone) misplaced(f, mid float64, k int) bool {
+	m := &e.memory
+	if !m.known || m.seconds < 10 || e.local < 0 || e.merged || mid-m.at > strangeFor || math.Abs(e.cfg.SetOff()) >= 10 {
+		return false
+	}
+	want := m.carrier
+	if k != e.local {
+		want = m.local
+	}
+	return math.Abs(f-want) > hintReach
 }

@@ -21,6 +21,11 @@ func (e *twoTone) identify(mid float64) {
 			e.remember(mid)
 		} else if e.local >= 0 && math.Hypot(a.uf, b.uf) < 0.1 {
 			c, l := &e.tr[1-e.local], &e.tr[e.local]
+			if m := &e.memory; m.known && math.Abs((l.f-c.f)-(m.local-m.carrier)) > hintReach {
+				e.memory.seconds, e.smeared = 0, 0
+				e.memory.evC, e.memory.evL = evidence{}, evidence{}
+				e.sm.forget() // another tone than the one that was the carrier
+			}
 			// A tone that came back goes on with the evidence it had.
 			for _, x := range []struct {
 				t   *track
