@@ -11,9 +11,10 @@ import (
 
 // found is a spectral line that the search found.
 type found struct {
-	f   float64 // Hz; negative only for complex input
-	amp float64 // amplitude of the tone, full scale 1
-	cn0 float64 // tone power over noise power in 1 Hz, a ratio
+	f    float64 // Hz; negative only for complex input
+	amp  float64 // amplitude of the tone, full scale 1
+	cn0  float64 // tone power over noise power in 1 Hz, a ratio
+	rung float64 // where the line is by which it is known as mains hum, Hz; NaN: it is none
 }
 
 // A line must stand falseAlarm times above the noise around it, as power in
@@ -169,10 +170,24 @@ func (a *acquirer) lines() []found {
 		if !a.complex {
 			density *= 4
 		}
-		out = append(out, found{(float64(k) + d) * bin, amp, amp * amp / max(density, 1e-300)})
+		line := found{(float64(k) + d) * bin, amp, amp * amp / max(density, 1e-300), math.NaN()}
+		if !a.complex {
+			line.rung = rung(line.f, a.around)
+		}
+		out = append(out, line)
 	}
 	sort.Slice(out, func(i, j int) bool { return out[i].amp > out[j].amp })
 	return a.thin(out, bin)
+}
+
+// around returns the power of the strongest of the three bins nearest to f, NaN
+// beside the spectrum of real samples.
+func (a *acquirer) around(f float64) float64 {
+	k := int(math.Round(f / a.rate * float64(a.n)))
+	if k < 1 || k > a.n/2-2 {
+		return math.NaN()
+	}
+	return max(a.at(k-1), a.at(k), a.at(k+1))
 }
 
 // median of the power in bins from..to.
@@ -185,8 +200,8 @@ func (a *acquirer) median(from, to int) float64 {
 	return a.tmp[len(a.tmp)/2]
 }
 
-// thin drops what is the skirt of a stronger line or an exact harmonic of one
-// (a receiver's own distortion) and keeps the strongest dozen.
+// thin drops what is the skirt of a stronger line or a harmonic of one (a
+// receiver's own distortion) and keeps the strongest dozen.
 func (a *acquirer) thin(in []found, bin float64) []found {
 	var out []found
 next:
@@ -198,10 +213,8 @@ next:
 			if math.Abs(l.f-s.f) < 4.5*bin && l.amp < 0.5*s.amp {
 				continue next
 			}
-			for h := 2.0; h <= 5; h++ {
-				if math.Abs(l.f-h*s.f) < bin && l.amp < 0.15*s.amp {
-					continue next
-				}
+			if !a.complex && l.amp < 0.15*s.amp && distorted(l.f, s.f, a.rate*float64(a.d), bin) {
+				continue next
 			}
 		}
 		out = append(out, l)

@@ -50,19 +50,27 @@ func (j *jitter) typical() (hz2, ratio float64, ok bool) {
 }
 
 // byJitter returns the index of the tone that stands still beside one that
-// plainly does not, or -1.
+// plainly does not, or -1. Where one fades and the other does not, less will do:
+// a hand at the local's wire changes its level too, but not its frequency.
 func (e *twoTone) byJitter() int {
 	if e.cfg.Wired {
 		return -1
 	}
-	a, ra, ok0 := e.tr[0].jit.typical()
-	b, rb, ok1 := e.tr[1].jit.typical()
-	switch {
-	case !ok0 || !ok1:
-	case a > 20*b && ra > 20:
-		return 1
-	case b > 20*a && rb > 20:
-		return 0
+	var d, r [2]float64
+	for k := range e.tr {
+		var ok bool
+		if d[k], r[k], ok = e.tr[k].jit.typical(); !ok {
+			return -1
+		}
+	}
+	for k := range e.tr {
+		plainly := 20.0
+		if e.tr[1-k].ev.fades(&e.tr[k].ev) {
+			plainly = 5
+		}
+		if d[1-k] > plainly*d[k] && r[1-k] > plainly {
+			return k
+		}
 	}
 	return -1
 }

@@ -105,11 +105,15 @@ next:
 // and its density; 0 density when there is none.
 func (s *spectrum) peak(lo, hi, guard float64, avoid []float64) (f, density float64) {
 	best := -1
+	step := s.rate / float64(s.n)
 next:
 	for i, p := range s.p {
 		g := s.freq(i)
 		if g < lo || g > hi || (best >= 0 && p <= s.p[best]) {
 			continue
+		}
+		if (g-step < lo && s.p[(i+s.n-1)%s.n] > p) || (g+step > hi && s.p[(i+1)%s.n] > p) {
+			continue // the skirt of one that lies beyond
 		}
 		for _, a := range avoid {
 			if math.Abs(g-a) < guard {

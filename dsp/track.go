@@ -200,7 +200,10 @@ func (l *lens) take(t *track, b *band, mid float64, ln int) {
 		return // what it was stays the better guess of what it is
 	}
 	if t.whole {
-		t.ev.add(20*math.Log10(cmplx.Abs(x.a)/gain), l.spec.pair(x.f, n0, b.half))
+		t.ev.add(20 * math.Log10(cmplx.Abs(x.a)/gain))
+		if len(l.lines) >= 2 && ln < 2 {
+			t.ev.sidebands(l.ownPair(b, ln, 1-ln, n0))
+		}
 		// an average over about ten seconds
 		t.noise += max(0.1, 1/float64(t.seen+1)) * (s - t.noise)
 	}

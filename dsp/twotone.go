@@ -10,10 +10,13 @@ const (
 	// of difference the joint bound is still within 1.23 of the single one in
 	// the worst phase, at 1.0 it is 2.5 times that (facts of the two-tone
 	// information matrix). New tones have to be further apart to be taken up.
-	holdApart = 1.6
-	takeApart = 2.0
-	pull      = 140.0 // how far a beat may lie from its set-off when nothing was told of the tones, Hz
-	loud      = 100.0 // C/N0, Hz, above which one second is proof enough of a tone
+	holdApart  = 1.6
+	takeApart  = 2.0
+	pull       = 140.0 // how far a beat may lie from its set-off when nothing was told of the tones, Hz
+	strangeFor = 60.0  // for how long after a pair was held only a tone about where it was is taken for its lost one, s
+	hintReach  = 30.0  // how far from where it was said to be a local is looked for, Hz
+	nearLevel  = 0.003 // of a loud far tone's power, that a near one must have
+	loud       = 100.0 // C/N0, Hz, above which one second is proof enough of a tone
 )
 
 // pairMemory is what is remembered of the two tones once they were known.
@@ -24,6 +27,7 @@ type pairMemory struct {
 	carrier, local float64 // Hz
 	ampC, ampL     float64
 	evC, evL       evidence
+	seconds        int // in which both were there
 }
 
 // twoTone holds the carrier's tone and the local's.
@@ -65,8 +69,13 @@ type twoTone struct {
 	hidden   bool // the local's line is somewhere in the smear
 	hits     int  // how often in a row it was found there again, and where
 	hitAt    float64
-	lostLine int // seconds for which the local's line has not been found in the smear
-	gone     int // seconds in a row in which no line of its level stood anywhere
+	gone     int     // seconds in a row in which no line of its level stood anywhere
+	lostLine int     // seconds for which the local's line has not been found in the smear
+	focus    float64 // where lines are looked for, audio Hz; 0: everywhere
+	third    float64 // a tone near one of two far apart, and how often it was seen in a row
+	thirdN   int
+	goneN    int // seconds in a row in which one of two close tones was not there
+	smeared  int // seconds in a row in which the carrier was smeared as a path does it
 	dim      int // seconds in a row without the carrier's power beside the local
 }
 
@@ -111,7 +120,7 @@ func (e *twoTone) second(i int64) Reading {
 	if spread && e.hidden {
 		return e.reading(mid)
 	}
-	if !spread && e.closeBy(mid) && e.followClose(mid) && e.sure {
+	if !spread && e.closeBy(mid) && e.followClose(mid) && e.sure && !e.oneGone(mid) {
 		if math.Abs(e.closest.sep(mid)) > holdApart && e.closest.span <= 8 {
 			e.fade(mid) // is it a carrier that fades?
 		}
@@ -128,6 +137,9 @@ func (e *twoTone) second(i int64) Reading {
 		}
 	} else {
 		e.alone = 0
+		if e.held() == 2 && !e.merged && !spread {
+			e.nearer(mid)
+		}
 	}
 	e.identify(mid)
 	switch {
@@ -190,11 +202,11 @@ func (e *twoTone) followBoth(b *band, mid float64, own [2]int) {
 	}
 	l.lines = l.lines[:0]
 	n := e.scan(b, 2)
-	if n == 2 && e.followJump(b, mid, own, old, want) {
+	if n == 2 && !e.stranger(b, want) && e.followJump(b, mid, own, old, want) {
 		return
 	}
 	e.tr[own[0]], e.tr[own[1]] = old[0], old[1]
-	if close && n > 0 {
+	if close && n > 0 && !e.leftOne(b, old, want) {
 		e.merge(mid, own)
 		return
 	}
@@ -367,7 +379,12 @@ func (e *twoTone) followOne(b *band, mid float64, k int) {
 	if e.otherBand(b) {
 		need = 1
 	}
-	n := e.scan(b, need)
+	n := 0
+	if lost {
+		n = e.scan(b, need)
+	} else {
+		n = e.scanNear(b, need, t.f)
+	}
 	if n == 0 || (n == 1 && !lost) {
 		if n == 0 {
 			*t = was
@@ -407,6 +424,10 @@ func (e *twoTone) otherBand(b *band) bool { return len(e.bands) > 1 }
 // takes it up when that is enough.
 func (e *twoTone) sight(b *band, mid float64, k, ln int) {
 	f := e.lens.lines[ln].f + b.centre
+	if e.misplaced(f, mid, k) {
+		e.candN = 0
+		return
+	}
 	if e.candN > 0 && math.Abs(f-e.cand) > 2 {
 		e.candN = 0
 	}
@@ -415,10 +436,13 @@ func (e *twoTone) sight(b *band, mid float64, k, ln int) {
 	o := 1 - k
 	was := e.tr[o]
 	e.tr[o] = track{live: true, band: b}
+	if mid-was.at < 10 && math.Abs(f-was.f) < 1 { // it is back: what was seen of it still counts
+		e.tr[o].ev, e.tr[o].jit = was.ev, was.jit
+	}
 	e.take(b, mid, o, ln)
 	t := &e.tr[o]
 	enough := e.candN >= 2 || (!e.merged && t.cn0() > loud)
-	if !t.whole || !e.tr[k].whole || !enough {
+	if !e.isLine(ln) || !t.whole || !e.tr[k].whole || !enough {
 		e.tr[o] = was
 		e.tr[o].live = false
 		return

@@ -112,6 +112,7 @@ func (e *twoTone) takeClose(y *fitted, b *band, mid, g float64) {
 	}
 	m := &e.memory
 	m.at, m.carrier, m.local = mid, c.f, l.f
+	m.seconds++
 	e.trust()
 }
 

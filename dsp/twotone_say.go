@@ -8,6 +8,7 @@ import (
 // identify settles which tone is the local's, where that can be known: by the
 // set-off, by what is remembered of the pair, by the hint.
 func (e *twoTone) identify(mid float64) {
+	e.watch()
 	if e.held() == 2 && !e.merged {
 		a, b := &e.tr[0], &e.tr[1]
 		if !a.whole || !b.whole {
@@ -24,6 +25,11 @@ func (e *twoTone) identify(mid float64) {
 			e.remember(mid)
 		} else if e.local >= 0 && math.Hypot(a.uf, b.uf) < 0.1 {
 			c, l := &e.tr[1-e.local], &e.tr[e.local]
+			if m := &e.memory; m.known && math.Abs((l.f-c.f)-(m.local-m.carrier)) > hintReach {
+				e.memory.seconds, e.smeared = 0, 0
+				e.memory.evC, e.memory.evL = evidence{}, evidence{}
+				e.sm.forget() // another tone than the one that was the carrier
+			}
 			// A tone that came back goes on with the evidence it had.
 			for _, x := range []struct {
 				t   *track
@@ -34,7 +40,8 @@ func (e *twoTone) identify(mid float64) {
 				}
 			}
 			e.anchor.add(mid, c.f, c.uf)
-			e.memory = pairMemory{true, false, mid, c.f, l.f, c.amp, l.amp, c.ev, l.ev}
+			e.memory = pairMemory{known: true, at: mid, carrier: c.f, local: l.f, ampC: c.amp, ampL: l.amp,
+				evC: c.ev, evL: l.ev, seconds: e.memory.seconds + 1}
 		}
 		return
 	}
@@ -55,6 +62,18 @@ func (e *twoTone) identify(mid float64) {
 	}
 	if e.held() == 0 {
 		e.local = -1
+	}
+}
+
+// watch counts for how long the carrier has been smeared as Doppler does it:
+// noise through a narrow filter looks like one that is smeared more widely than
+// ordinary paths do, and a weak steady line is narrow only by what of it stands
+// in one line.
+func (e *twoTone) watch() {
+	if e.sm.sigma >= 2*spreadLeast && e.sm.sigma < widestPath && e.sm.steady < 0.9 {
+		e.smeared++
+	} else {
+		e.smeared = 0
 	}
 }
 
@@ -180,9 +199,7 @@ func (e *twoTone) sayBoth(r *Reading, mid, scale float64) {
 		e.sayTone(b, &r.LocalTone, &r.LocalDBFS, &r.LocalCN0, scale)
 		r.Why = ""
 		why, proven := a.ev.carrierLike(&b.ev)
-		// Noise through a narrow filter looks like a carrier that is smeared more
-		// widely than ordinary paths do.
-		if !proven && e.sm.sigma >= 2*spreadLeast && e.sm.sigma < 0.8 {
+		if !proven && e.smeared >= smearedTime {
 			why, proven = "its tone is smeared by Doppler, the other stands still", true
 		}
 		if proven {

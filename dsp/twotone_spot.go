@@ -31,34 +31,25 @@ func (e *twoTone) spot(mid float64) bool {
 	}
 	p.subtract(a, f, c)
 	a2 := real(a)*real(a) + imag(a)*imag(a)
-	n0 := e.floor(b, f+st.centre)
+	n0 := e.floor(b, f+st.centre) // leaves the latest second in the lens
 	// What is left within a hertz of the line is its own unsteadiness, or a
 	// carrier's; further out it is the carrier's, if there is one.
-	var beside, far, far1, far2 float64
-	step := 1 / spotSpan
-	for g := -spotReach; g <= spotReach; g += step {
-		d := (p.fit.density(st, g) - n0) * step
-		if math.Abs(g-f) < 0.7 {
-			beside += d
-			continue
-		}
-		far += d
-		far1 += d * g
-		far2 += d * g * g
-	}
-	if far <= 0 || beside > 0.5*a2 || a2*spotSpan < 40*n0 {
+	y := e.beyond(st, f, n0)
+	far, mean, width := y.power, y.mean, y.width
+	if far <= 0 || y.beside > 0.5*a2 || a2*spotSpan < 40*n0 {
 		return false
 	}
-	mean := far1 / far
-	width := math.Sqrt(max(0, far2/far-mean*mean))
-	if far < 20*n0/spotSpan+8*n0*math.Sqrt(2*spotReach/spotSpan) || far < 0.02*a2 || width < 0.15 || width > 4 {
+	if far < 20*n0/spotSpan+8*n0*math.Sqrt(2*y.reach/spotSpan) || far < 0.02*a2 || width < 0.15 || width > 4 {
 		return false
+	}
+	if e.humAt(b, f+st.centre-b.centre) || !e.holds(f+st.centre, 1) && !e.holds(mean+st.centre, 1+2*width) {
+		return false // something else than the tones that are held
 	}
 	// The carrier must not be a line of its own, nor one that is being turned.
 	for k := -40; k <= 40; k++ {
 		turn := float64(k) * 0.0125
 		g2, d2 := p.peak(mean-2*width, mean+2*width, turn, f, 0.7)
-		if d2*step > 0.5*far || turn == 0 && math.Abs(g2-f) < 0.7 {
+		if d2/spotSpan > 0.5*far || turn == 0 && math.Abs(g2-f) < 0.7 {
 			return false
 		}
 	}
@@ -77,6 +68,9 @@ func (e *twoTone) spot(mid float64) bool {
 			return false
 		}
 	}
+	if !lasts(p.fit.r, n0/st.dt) {
+		return false // a tone that came or went
+	}
 	if e.spotted == 0 || math.Abs(f+st.centre-e.spotAt) > 0.1 {
 		e.spotted = 0
 	}
@@ -87,6 +81,80 @@ func (e *twoTone) spot(mid float64) bool {
 	e.spotted = 0
 	e.settle(b, mid, f+st.centre, mean+st.centre, math.Sqrt(a2), far, width, n0)
 	return true
+}
+
+// holds reports whether a tone is held within reach of f.
+func (e *twoTone) holds(f, reach float64) bool {
+	for k := range e.tr {
+		if e.tr[k].live && math.Abs(e.tr[k].f-f) < reach {
+			return true
+		}
+	}
+	return false
+}
+
+// smudge is what lies beside a line: its power, mean and rms width within reach
+// of the mean, and the power close to the line.
+type smudge struct{ power, mean, width, reach, beside float64 }
+
+// beyond measures what is left in the stretch beside the line at f. Gain control
+// repeats a smear on the other side of the line, and weakly further out: the
+// strongest part counts, with what belongs to it.
+func (e *twoTone) beyond(st *stretch, f, n0 float64) smudge {
+	const step = 1 / spotSpan
+	const n = int(2*spotReach/step) + 1
+	var d [n]float64
+	y := smudge{reach: 1}
+	best, run := 0.0, 0.0
+	const wide = int(1 / step)
+	for i := range d {
+		g := -spotReach + float64(i)*step
+		d[i] = (e.pair.fit.density(st, g) - n0) * step
+		if math.Abs(g-f) < 0.7 {
+			y.beside += d[i]
+			d[i] = 0
+		}
+		run += d[i]
+		if i >= wide {
+			run -= d[i-wide]
+		}
+		if run > best {
+			best, y.mean = run, g-0.5
+		}
+	}
+	y.reach = 2
+	for range 5 {
+		var p, p1, p2 float64
+		for i, v := range d {
+			if g := -spotReach + float64(i)*step - y.mean; math.Abs(g) <= y.reach {
+				p += v
+				p1 += v * g
+				p2 += v * g * g
+			}
+		}
+		y.power = p
+		if p <= 0 {
+			break
+		}
+		y.mean += p1 / p
+		y.width = math.Sqrt(max(0, p2/p-p1/p*(p1/p)))
+		y.reach = min(spotReach, 1+3*y.width)
+	}
+	return y
+}
+
+// lasts reports whether what is in r, beside noise of power noise, is there in
+// its first and in its last quarter as in the whole.
+func lasts(r []complex128, noise float64) bool {
+	power := func(z []complex128) (sum float64) {
+		for _, v := range z {
+			sum += real(v)*real(v) + imag(v)*imag(v)
+		}
+		return sum/float64(max(1, len(z))) - noise
+	}
+	q := len(r) / 4
+	least := 0.1 * power(r)
+	return power(r[:q]) > least && power(r[len(r)-q:]) > least
 }
 
 // lineAt fits one line near f in the stretch.

@@ -325,6 +325,7 @@ func (e *twoTone) takeSmeared(c, l *track, b *band, carrier, mid float64) {
 func (e *twoTone) remember(mid float64) {
 	c, l, m := &e.tr[1-e.local], &e.tr[e.local], &e.memory
 	m.at, m.carrier, m.local = mid, c.f, l.f
+	m.seconds++
 	m.ampC += 0.05 * (c.amp - m.ampC)
 	if r := l.amp / m.ampL; e.sm.info > 4*telling && r > 0.85 && r < 1.18 {
 		m.ampL += 0.05 * (l.amp - m.ampL)

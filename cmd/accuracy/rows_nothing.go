@@ -118,17 +118,21 @@ func (p *played) beats() (all, bold, signed int) {
 	return all, bold, signed
 }
 
-// judgeNothing: no beat at all, or where flagged is set none but unproven ones.
-func judgeNothing(all []played, flagged bool) []figure {
+// judgeNothing: no beat at all, or one that is flagged unproven; and the local
+// held as the lone tone that it is wherever nothing is flagged.
+func judgeNothing(all []played) []figure {
 	hours := 0.0
-	total, bold, signed, scenes, held, seconds, takenFor := 0, 0, 0, 0, 0, 0, 0
+	total, bold, signed, scenes, told0, held, seconds, flagged, takenFor := 0, 0, 0, 0, 0, 0, 0, 0, 0
 	for i := range all {
 		p := &all[i]
 		hours += float64(len(p.readings)) / 3600
 		n, b, s := p.beats()
 		total, bold, signed = total+n, bold+b, signed+s
-		if n > 0 && !flagged || b > 0 {
+		if b > 0 {
 			scenes++
+		}
+		if n > 0 {
+			told0++
 		}
 		if len(p.sim.LocalAway) > 0 {
 			continue
@@ -138,26 +142,27 @@ func judgeNothing(all []played, flagged bool) []figure {
 				continue
 			}
 			seconds++
-			if r.State == dsp.Lone && math.IsNaN(r.CarrierTone) && !(math.Abs(r.LocalTone-p.truthAt(k).LocalTone) > 1) {
+			switch {
+			case r.State == dsp.Lone && math.IsNaN(r.CarrierTone) && !(math.Abs(r.LocalTone-p.truthAt(k).LocalTone) > 1):
 				held++
+			case r.Has(dsp.Unproven) && !(math.Abs(r.LocalTone-p.truthAt(k).LocalTone) > 1):
+				flagged++
 			}
 			if math.Abs(r.CarrierTone-p.truthAt(k).LocalTone) < 1 {
 				takenFor++
 			}
 		}
 	}
-	perHour := func(n int) float64 { return float64(n) / hours }
-	f := most("readings with a beat, an hour", perHour(total), 0, "")
-	if flagged {
-		f = told("readings with a beat, an hour", perHour(total), "")
-	}
+	perHundred := func(n int) float64 { return 100 * float64(n) / hours }
 	return []figure{
 		told("sound", hours, "h"),
-		f,
-		told("of them with a sign", perHour(signed), ""),
-		most("of them not flagged unproven", perHour(bold), 0, ""),
-		told("scenes that miss", float64(scenes), ""),
-		least("local held as lone", percent(held, seconds), 95, "%"),
+		most("beats not flagged unproven, in 100 h", perHundred(bold), 0, ""),
+		told("such scenes", float64(scenes), ""),
+		told("beats flagged unproven, in 100 h", perHundred(total-bold), ""),
+		told("such scenes", float64(told0), ""),
+		told("beats with a sign, in 100 h", perHundred(signed), ""),
+		least("local held as lone, of seconds not flagged", percent(held, seconds-flagged), 95, "%"),
+		told("local held as lone, of all seconds", percent(held, seconds), "%"),
 		told("seconds in which it is taken for the carrier", float64(takenFor), ""),
 	}
 }
@@ -206,9 +211,9 @@ func judgeFound(all []played) []figure {
 func nothingRows() []row {
 	var rows []row
 	kinds := []struct {
-		name    string
-		kind    clutter
-		flagged bool
+		name   string
+		kind   clutter
+		narrow bool
 	}{
 		{"noise, filter 10 to 400 Hz", ringing(10, 400), false},
 		{"noise, filter 2 to 5 Hz", ringing(2, 5), true},
@@ -218,14 +223,14 @@ func nothingRows() []row {
 	for _, k := range kinds {
 		rows = append(rows, row{name: "no carrier: " + k.name, share: 0.25,
 			make:  func(r *rand.Rand) scene { return nothing(r, k.kind) },
-			judge: func(all []played) []figure { return judgeNothing(all, k.flagged) },
+			judge: judgeNothing,
 			worse: func(p *played) float64 {
 				n, bold, _ := p.beats()
 				return float64(n + 10*bold)
 			}})
 	}
 	for _, k := range kinds {
-		if k.flagged {
+		if k.narrow {
 			continue // as narrow as that, noise is the carrier's own fading
 		}
 		rows = append(rows, row{name: "a carrier after all: " + k.name, share: 0.5,
