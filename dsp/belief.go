@@ -7,6 +7,7 @@ import (
 
 const (
 	beliefSeconds = 40   // for how long after the tones parted the sum is kept open
+	beliefLeast   = 3    // seconds of both tones before any name is given
 	carrierSlack  = 0.02 // Hz: what gain control and programme do to a second's carrier
 	localSlack    = 0.03 // Hz: how unevenly a hand turns a trimmer from second to second
 	levelSay      = 4.0  // log-odds that levels alone may give
@@ -155,6 +156,7 @@ func (e *twoTone) weigh(mid float64) {
 	odds := e.odds()
 	switch {
 	case b.n == 0:
+	case e.local < 0 && b.n < beliefLeast:
 	case e.local < 0 && odds > sureEnough:
 		e.local = 1
 	case e.local < 0 && odds < -sureEnough:

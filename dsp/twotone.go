@@ -16,6 +16,7 @@ const (
 	strangeFor = 60.0  // for how long after a pair was held only a tone about where it was is taken for its lost one, s
 	hintReach  = 30.0  // how far from where it was said to be a local is looked for, Hz
 	nearLevel  = 0.003 // of a loud far tone's power, that a near one must have
+	partReach  = 12.0  // how far from each other merged tones come up again, Hz
 	loud       = 100.0 // C/N0, Hz, above which one second is proof enough of a tone
 )
 
@@ -347,6 +348,9 @@ func (e *twoTone) followMerged(b *band, mid float64, k int) {
 		return
 	}
 	e.missed = 0
+	if n == 2 && math.Abs(l.lines[1].f-l.lines[0].f) > partReach {
+		n = 1 // no tone leaves another by so much at once: it is part of its modulation, or a stranger
+	}
 	if n == 2 {
 		e.take(b, mid, k, 0)
 		e.sight(b, mid, k, 1)
