@@ -45,8 +45,13 @@ type hit struct {
 
 // at returns the frequency at time t and its uncertainty there.
 func (h *hit) at(t float64) (f, u float64) {
-	return h.m.when(t), h.m.uf * (1 + 2*math.Abs(t-h.m.at)/h.span)
+	return h.m.when(t), h.m.uf * widen(t-h.m.at, h.span)
 }
+
+// widen returns by how much a frequency is less known d from the middle of its
+// span than there: with the chirp free, nearly fourfold at its ends, the root of
+// one plus 60 (d/span)^2 of the least-squares parabola of phase.
+func widen(d, span float64) float64 { return math.Sqrt(1 + 60*d*d/max(1, span*span)) }
 
 // search scores all frequencies of a whitened stretch at once: the matched sum
 // for lines of one chirp is the Fourier transform of what the filter lets
@@ -152,8 +157,9 @@ func (q *search) rival(dt, f, guard, f0, reach float64) float64 {
 // gains most by it.
 func (s *smear) find(b *band, x *seek) bool {
 	var best hit
-	s.absent = false
+	s.absent, s.could = 0, 0
 	x.haze.power = s.crowd(x)
+	s.dense = x.haze.power / (math.Sqrt(2*math.Pi) * x.haze.sigma)
 	for _, span := range ladder {
 		h, ok := s.try(b, span, x)
 		if !ok {
@@ -176,7 +182,6 @@ func (s *smear) find(b *band, x *seek) bool {
 		s.span = 0
 		return false
 	}
-	s.absent = false
 	s.moving(best.span <= 4)
 	s.loc, s.span = best.m, best.span
 	s.lever, s.info = leverage(best.span), best.info
@@ -212,8 +217,11 @@ func (s *smear) try(b *band, span float64, x *seek) (hit, bool) {
 	at, bend, cells := s.scan(plan, span, f0, reach, x, &out)
 	out.next = s.search.rival(st.dt, at, 1.6/span, f0, reach)
 	out.info = x.amp * x.amp * w.power(at)
-	if span > farSpan && out.score <= 0 && out.info > 3*telling {
-		s.absent = true
+	if span > farSpan && span <= crowdSpan && out.info > 3*telling {
+		s.could++
+		if out.score <= 0 && out.next <= 0 {
+			s.absent++
+		}
 	}
 	if out.info < telling { // the smear's own tops reach as high
 		return out, false
@@ -232,7 +240,7 @@ func (s *smear) try(b *band, span float64, x *seek) (hit, bool) {
 	if amp == 0 || math.Abs(f-at) > 1/span {
 		return out, false
 	}
-	if d := math.Abs(f - f0 + c*d); !plain && d > 4*math.Hypot(x.uf, uf)+1e-3 {
+	if d := math.Abs(f - f0 + c*d); !plain && d > 4*math.Hypot(x.uf, 4*uf)+1e-3 {
 		return out, false
 	}
 	// A line of the local's level gains what it is worth, give or take the level.

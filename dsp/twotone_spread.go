@@ -1,6 +1,9 @@
 package dsp
 
-import "math"
+import (
+	"fmt"
+	"math"
+)
 
 const (
 	nearTones  = 12.0 // tones closer than this share the slow ring, Hz
@@ -191,7 +194,7 @@ func (e *twoTone) followSpread(mid float64) bool {
 	if e.hidden {
 		e.sm.mean = x.haze.mu - m.when(end)
 	}
-	e.lostLine, e.hits, e.hidden, e.merged = 0, 0, false, false
+	e.lostLine, e.hits, e.gone, e.hidden, e.merged = 0, 0, 0, false, false
 	l.live, l.band = true, b
 	l.f, l.c, l.at, l.amp, l.uf = m.when(mid), m.c, mid, m.amp, m.uf
 	l.phase = m.turnsAt(mid)
@@ -217,7 +220,7 @@ func (e *twoTone) seekLocal(b *band, l *track, end float64) seek {
 	// A little more smear than was seen: its skirts must not pass for the line.
 	x.haze = haze{e.sm.slowly, 1.25*e.sm.sigma + 0.02, carrier, max(l.noise*g*g, 1e-12*x.amp*x.amp)}
 	x.f, x.reach, x.held = e.sm.loc.when(end), 0.7, true
-	x.uf = e.sm.loc.uf * (1 + 2*math.Abs(end-e.sm.loc.at)/max(1, e.sm.span))
+	x.uf = e.sm.loc.uf * widen(end-e.sm.loc.at, e.sm.span)
 	if e.sm.span == 0 { // anywhere about the carrier
 		x.f, x.reach, x.held = carrier, farReach, false
 	}
@@ -269,7 +272,7 @@ func (e *twoTone) hide(b *band, l *track, mid float64) bool {
 	} else {
 		e.dim = 0
 	}
-	if e.sm.absent {
+	if e.sm.could > 0 && e.sm.absent == e.sm.could {
 		e.gone++
 	} else {
 		e.gone = 0
@@ -332,4 +335,12 @@ func (e *twoTone) remember(mid float64) {
 	if !math.IsNaN(e.sm.beat) {
 		e.anchor.add(mid, c.f, math.Hypot(c.uf, 0.001))
 	}
+}
+
+// hiddenWhy says what a local that is lost in the carrier's smear needs.
+func (e *twoTone) hiddenWhy() string {
+	if t := e.sm.needs(e.memory.ampL); !math.IsNaN(t) {
+		return fmt.Sprintf("the local is somewhere in the carrier's smear: needs about %.0f s at rest", t)
+	}
+	return fmt.Sprintf("the local is somewhere in the carrier's smear and too weak for its middle: needs more than %.0f s at rest, a louder local, or a beat of more than %.1f Hz", longSpan, 4*e.sm.sigma)
 }
