@@ -82,6 +82,9 @@ type smear struct {
 	turns         bool    // seen from a local that turns, the carrier's smear cannot be measured
 	still         int     // seconds since it did
 	absent, could int     // spans in which no line of the local's level stands anywhere, of those in which one would show
+	seen          float64 // when the local's line was last seen, s
+	turned        bool    // and whether it was being turned then
+	learnt        float64 // when the drift was last learnt from a long span, s
 	dense         float64 // density of the smear at its middle, as reckoned with
 	rest          anchor  // the local's own frequency, and with it the receiver's drift
 	home          home    // where the carrier stands on the whole
@@ -112,7 +115,7 @@ func newSmear(s *slow) *smear {
 // forget starts afresh, as when the pair is lost.
 func (s *smear) forget() {
 	s.span, s.beat, s.sigma, s.slowly, s.steady = 0, math.NaN(), math.NaN(), 0, math.NaN()
-	s.home = home{}
+	s.home, s.seen = home{}, 0
 	s.ring = [len(s.ring)]complex128{}
 }
 

@@ -32,6 +32,8 @@ type seek struct {
 	held      bool    // the line was there a second ago: another place must be plainly better
 	uf        float64 // how well f is known then
 	slope, us float64 // the receiver's drift
+	since     float64 // when the line was last seen
+	was, wasU float64 // where it would be now if it rests since then, audio Hz; NaN: it was being turned
 }
 
 // hit is a line found over one span.
@@ -183,6 +185,7 @@ func (s *smear) find(b *band, x *seek) bool {
 		return false
 	}
 	s.moving(best.span <= 4)
+	s.seen, s.turned = x.end, best.turn != 0
 	s.loc, s.span = best.m, best.span
 	s.lever, s.info = leverage(best.span), best.info
 	return true
@@ -246,6 +249,10 @@ func (s *smear) try(b *band, span float64, x *seek) (hit, bool) {
 	// A line of the local's level gains what it is worth, give or take the level.
 	level, most := cmplx.Abs(amp)/x.amp, 2/math.Sqrt(2*out.info)
 	if level < 0.65-most || level > 1.5+most || out.score < 0.3*out.info-6 {
+		return out, false
+	}
+	// It cannot have rested here for longer than since it was seen elsewhere.
+	if span > x.end-x.since+1 && !(math.Abs(f+c*d+x.slope*d+centre-x.was) < 4*math.Hypot(x.wasU, 4*uf)+2e-3) {
 		return out, false
 	}
 	if !w.bears(f, c, amp, x.lo, x.hi) {

@@ -30,6 +30,7 @@ func (e *twoTone) fade(mid float64) {
 	e.sm.loc, e.sm.span, e.sm.lever = guess, 1, 0
 	e.sm.moving(turning)
 	e.sm.rest.follow(mid, l.f, l.uf)
+	e.sm.seen, e.sm.turned = mid+0.5, turning
 	if turning {
 		e.sm.note(nil, mid)
 		if c.live {
@@ -79,11 +80,26 @@ func (e *twoTone) keepSlow() {
 func (e *twoTone) drift(t float64) (slope, u float64) {
 	slope, u = e.anchor.drift(t)
 	if r := &e.sm.rest; r.known {
-		if s, us := r.drift(t); us < u {
+		if s, us := r.drift(t); us < u || e.sm.sigma > wideSpread && us < 10*driftWalk*math.Sqrt(longSpan) {
 			return s, us
 		}
 	}
 	return slope, u
+}
+
+// learnDrift takes the receiver's drift from the local's line in the smear, known
+// to us before. Fits of long spans share most of their seconds: one counts only
+// half a span after the last.
+func (e *twoTone) learnDrift(mid, us float64) {
+	sm := e.sm
+	switch {
+	case sm.span == 8 || sm.span == 16:
+		sm.rest.follow(mid, sm.loc.when(mid), sm.loc.uf)
+	case sm.span > 64 && sm.info > 3*telling && mid-sm.learnt > sm.span/2:
+		own := math.Sqrt(60) * sm.loc.uf / sm.span
+		sm.learnt = mid
+		sm.rest.set(mid, sm.loc.when(mid), 4*sm.loc.uf, sm.loc.c, us*own/math.Hypot(us, own))
+	}
 }
 
 // near reports whether both tones fit into the slow ring.
@@ -200,9 +216,7 @@ func (e *twoTone) followSpread(mid float64) bool {
 	l.phase = m.turnsAt(mid)
 	l.whole, l.tail = true, true
 	l.seen++
-	if e.sm.span <= 16 && e.sm.span >= 8 { // longer ones share most of their seconds
-		e.sm.rest.follow(mid, l.f, l.uf)
-	}
+	e.learnDrift(mid, x.us)
 	e.takeSmeared(c, l, b, x.haze.mu, mid)
 	return true
 }
@@ -221,6 +235,10 @@ func (e *twoTone) seekLocal(b *band, l *track, end float64) seek {
 	x.haze = haze{e.sm.slowly, 1.25*e.sm.sigma + 0.02, carrier, max(l.noise*g*g, 1e-12*x.amp*x.amp)}
 	x.f, x.reach, x.held = e.sm.loc.when(end), 0.7, true
 	x.uf = e.sm.loc.uf * widen(end-e.sm.loc.at, e.sm.span)
+	x.since, x.was, x.wasU = e.sm.seen, x.f, x.uf+2*x.us*(end-e.sm.seen)
+	if e.sm.turned {
+		x.was = math.NaN()
+	}
 	if e.sm.span == 0 { // anywhere about the carrier
 		x.f, x.reach, x.held = carrier, farReach, false
 	}
