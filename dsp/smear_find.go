@@ -163,6 +163,12 @@ func (s *smear) find(b *band, x *seek) bool {
 	x.haze.power = s.crowd(x)
 	s.dense = x.haze.power / (math.Sqrt(2*math.Pi) * x.haze.sigma)
 	for _, span := range ladder {
+		if math.IsNaN(x.was) && span > x.end-x.since+1 { // it was being turned then
+			break
+		}
+		if x.held && s.inside && s.info*span < telling/4*s.span { // far too short
+			continue
+		}
 		h, ok := s.try(b, span, x)
 		if !ok {
 			continue
@@ -179,8 +185,8 @@ func (s *smear) find(b *band, x *seek) bool {
 		best = h
 	}
 	// In the middle of the smear only a line that rests can be told from its tops.
-	inside := math.Abs(best.m.when(x.end)-x.haze.mu) < 2.5*x.haze.sigma
-	if best.span == 0 || inside && (best.span < 8 || !(s.steady < 0.4 || math.IsNaN(s.steady) && s.sigma > 0.15)) {
+	s.inside = best.span > 0 && math.Abs(best.m.when(x.end)-x.haze.mu) < 2.5*x.haze.sigma
+	if best.span == 0 || s.inside && (best.span < 8 || !(s.steady < 0.4 || math.IsNaN(s.steady) && s.sigma > 0.15)) {
 		s.span = 0
 		return false
 	}
@@ -255,7 +261,7 @@ func (s *smear) try(b *band, span float64, x *seek) (hit, bool) {
 	if span > x.end-x.since+1 && !(math.Abs(f+c*d+x.slope*d+centre-x.was) < 4*math.Hypot(x.wasU, 4*uf)+2e-3) {
 		return out, false
 	}
-	if !w.bears(f, c, amp, x.lo, x.hi) {
+	if !w.bears(f, c, amp) {
 		return out, false
 	}
 	m := &out.m
