@@ -77,15 +77,20 @@ type smear struct {
 
 	search search
 
-	span   float64 // stretch of the local's last fit, s; 0: none
-	loc    model
-	turns  bool    // seen from a local that turns, the carrier's smear cannot be measured
-	still  int     // seconds since it did
-	absent bool    // no line of the local's level stands anywhere, though it would show
-	rest   anchor  // the local's own frequency, and with it the receiver's drift
-	home   home    // where the carrier stands on the whole
-	lever  float64 // share of the density at the local's frequency that its fit took away in the latest second, 1/s
-	info   float64 // log-likelihood that the line of that fit is worth
+	span          float64 // stretch of the local's last fit, s; 0: none
+	loc           model
+	turns         bool    // seen from a local that turns, the carrier's smear cannot be measured
+	still         int     // seconds since it did
+	absent, could int     // spans in which no line of the local's level stands anywhere, of those in which one would show
+	seen          float64 // when the local's line was last seen, s
+	turned        bool    // and whether it was being turned then
+	inside        bool    // the line was found within the smear
+	learnt        float64 // when the drift was last learnt from a long span, s
+	dense         float64 // density of the smear at its middle, as reckoned with
+	rest          anchor  // the local's own frequency, and with it the receiver's drift
+	home          home    // where the carrier stands on the whole
+	lever         float64 // share of the density at the local's frequency that its fit took away in the latest second, 1/s
+	info          float64 // log-likelihood that the line of that fit is worth
 
 	mean   float64 // carrier - local in the audio, Hz, smoothed
 	beat   float64 // the same in the latest second alone, NaN: not known
@@ -111,19 +116,18 @@ func newSmear(s *slow) *smear {
 // forget starts afresh, as when the pair is lost.
 func (s *smear) forget() {
 	s.span, s.beat, s.sigma, s.slowly, s.steady = 0, math.NaN(), math.NaN(), 0, math.NaN()
-	s.home = home{}
+	s.home, s.seen = home{}, 0
 	s.ring = [len(s.ring)]complex128{}
 }
 
-// needs returns for how long a local of the given level has to rest in the middle
-// of the smear for its line to stand twenty times above it, s.
+// needs returns for how long a local of the given level, |z|, has to rest in the
+// middle of the smear for its line to stand twenty times above it, s; NaN for
+// longer than is listened to.
 func (s *smear) needs(amp float64) float64 {
-	dense := s.slowly / (math.Sqrt(2*math.Pi) * max(s.sigma, 1e-3))
-	t := 8.0
-	for t < 300 && t*amp*amp < 20*dense {
-		t *= 1.25
+	if t := 20 * s.dense / (amp * amp); t <= longSpan {
+		return max(10, math.Ceil(t/10)*10)
 	}
-	return math.Ceil(t/10) * 10
+	return math.NaN()
 }
 
 // moving keeps account of whether the local is being turned.

@@ -32,6 +32,8 @@ type seek struct {
 	held      bool    // the line was there a second ago: another place must be plainly better
 	uf        float64 // how well f is known then
 	slope, us float64 // the receiver's drift
+	since     float64 // when the line was last seen
+	was, wasU float64 // where it would be now if it rests since then, audio Hz; NaN: it was being turned
 }
 
 // hit is a line found over one span.
@@ -45,8 +47,13 @@ type hit struct {
 
 // at returns the frequency at time t and its uncertainty there.
 func (h *hit) at(t float64) (f, u float64) {
-	return h.m.when(t), h.m.uf * (1 + 2*math.Abs(t-h.m.at)/h.span)
+	return h.m.when(t), h.m.uf * widen(t-h.m.at, h.span)
 }
+
+// widen returns by how much a frequency is less known d from the middle of its
+// span than there: with the chirp free, nearly fourfold at its ends, the root of
+// one plus 60 (d/span)^2 of the least-squares parabola of phase.
+func widen(d, span float64) float64 { return math.Sqrt(1 + 60*d*d/max(1, span*span)) }
 
 // search scores all frequencies of a whitened stretch at once: the matched sum
 // for lines of one chirp is the Fourier transform of what the filter lets
@@ -152,9 +159,16 @@ func (q *search) rival(dt, f, guard, f0, reach float64) float64 {
 // gains most by it.
 func (s *smear) find(b *band, x *seek) bool {
 	var best hit
-	s.absent = false
+	s.absent, s.could = 0, 0
 	x.haze.power = s.crowd(x)
+	s.dense = x.haze.power / (math.Sqrt(2*math.Pi) * x.haze.sigma)
 	for _, span := range ladder {
+		if math.IsNaN(x.was) && span > x.end-x.since+1 { // it was being turned then
+			break
+		}
+		if x.held && s.inside && s.info*span < telling/4*s.span { // far too short
+			continue
+		}
 		h, ok := s.try(b, span, x)
 		if !ok {
 			continue
@@ -171,13 +185,13 @@ func (s *smear) find(b *band, x *seek) bool {
 		best = h
 	}
 	// In the middle of the smear only a line that rests can be told from its tops.
-	inside := math.Abs(best.m.when(x.end)-x.haze.mu) < 2.5*x.haze.sigma
-	if best.span == 0 || inside && (best.span < 8 || !(s.steady < 0.4 || math.IsNaN(s.steady) && s.sigma > 0.15)) {
+	s.inside = best.span > 0 && math.Abs(best.m.when(x.end)-x.haze.mu) < 2.5*x.haze.sigma
+	if best.span == 0 || s.inside && (best.span < 8 || !(s.steady < 0.4 || math.IsNaN(s.steady) && s.sigma > 0.15)) {
 		s.span = 0
 		return false
 	}
-	s.absent = false
 	s.moving(best.span <= 4)
+	s.seen, s.turned = x.end, best.turn != 0
 	s.loc, s.span = best.m, best.span
 	s.lever, s.info = leverage(best.span), best.info
 	return true
@@ -212,8 +226,11 @@ func (s *smear) try(b *band, span float64, x *seek) (hit, bool) {
 	at, bend, cells := s.scan(plan, span, f0, reach, x, &out)
 	out.next = s.search.rival(st.dt, at, 1.6/span, f0, reach)
 	out.info = x.amp * x.amp * w.power(at)
-	if span > farSpan && out.score <= 0 && out.info > 3*telling {
-		s.absent = true
+	if span > farSpan && span <= crowdSpan && out.info > 3*telling {
+		s.could++
+		if out.score <= 0 && out.next <= 0 {
+			s.absent++
+		}
 	}
 	if out.info < telling { // the smear's own tops reach as high
 		return out, false
@@ -232,7 +249,7 @@ func (s *smear) try(b *band, span float64, x *seek) (hit, bool) {
 	if amp == 0 || math.Abs(f-at) > 1/span {
 		return out, false
 	}
-	if d := math.Abs(f - f0 + c*d); !plain && d > 4*math.Hypot(x.uf, uf)+1e-3 {
+	if d := math.Abs(f - f0 + c*d); !plain && d > 4*math.Hypot(x.uf, 4*uf)+1e-3 {
 		return out, false
 	}
 	// A line of the local's level gains what it is worth, give or take the level.
@@ -240,7 +257,11 @@ func (s *smear) try(b *band, span float64, x *seek) (hit, bool) {
 	if level < 0.65-most || level > 1.5+most || out.score < 0.3*out.info-6 {
 		return out, false
 	}
-	if !w.bears(f, c, amp, x.lo, x.hi) {
+	// It cannot have rested here for longer than since it was seen elsewhere.
+	if span > x.end-x.since+1 && !(math.Abs(f+c*d+x.slope*d+centre-x.was) < 4*math.Hypot(x.wasU, 4*uf)+2e-3) {
+		return out, false
+	}
+	if !w.bears(f, c, amp) {
 		return out, false
 	}
 	m := &out.m

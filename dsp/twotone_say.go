@@ -149,7 +149,7 @@ func (e *twoTone) reading(mid float64) Reading {
 		r.State = Merged
 		r.Why = "the tones are closer than the sound at rest so far can tell apart"
 		if e.hidden {
-			r.Why = fmt.Sprintf("the local is somewhere in the carrier's smear: needs about %.0f s at rest", e.sm.needs(e.memory.ampL))
+			r.Why = e.hiddenWhy()
 		}
 		e.sayNear(&r, mid, scale)
 	case held == 1:

@@ -1,6 +1,9 @@
 package dsp
 
-import "math"
+import (
+	"fmt"
+	"math"
+)
 
 const (
 	nearTones  = 12.0 // tones closer than this share the slow ring, Hz
@@ -27,6 +30,7 @@ func (e *twoTone) fade(mid float64) {
 	e.sm.loc, e.sm.span, e.sm.lever = guess, 1, 0
 	e.sm.moving(turning)
 	e.sm.rest.follow(mid, l.f, l.uf)
+	e.sm.seen, e.sm.turned = mid+0.5, turning
 	if turning {
 		e.sm.note(nil, mid)
 		if c.live {
@@ -76,11 +80,26 @@ func (e *twoTone) keepSlow() {
 func (e *twoTone) drift(t float64) (slope, u float64) {
 	slope, u = e.anchor.drift(t)
 	if r := &e.sm.rest; r.known {
-		if s, us := r.drift(t); us < u {
+		if s, us := r.drift(t); us < u || e.sm.sigma > wideSpread && us < 10*driftWalk*math.Sqrt(longSpan) {
 			return s, us
 		}
 	}
 	return slope, u
+}
+
+// learnDrift takes the receiver's drift from the local's line in the smear, known
+// to us before. Fits of long spans share most of their seconds: one counts only
+// half a span after the last.
+func (e *twoTone) learnDrift(mid, us float64) {
+	sm := e.sm
+	switch {
+	case sm.span == 8 || sm.span == 16:
+		sm.rest.follow(mid, sm.loc.when(mid), sm.loc.uf)
+	case sm.span > 64 && sm.info > 3*telling && mid-sm.learnt > sm.span/2:
+		own := math.Sqrt(60) * sm.loc.uf / sm.span
+		sm.learnt = mid
+		sm.rest.set(mid, sm.loc.when(mid), 4*sm.loc.uf, sm.loc.c, us*own/math.Hypot(us, own))
+	}
 }
 
 // near reports whether both tones fit into the slow ring.
@@ -191,15 +210,13 @@ func (e *twoTone) followSpread(mid float64) bool {
 	if e.hidden {
 		e.sm.mean = x.haze.mu - m.when(end)
 	}
-	e.lostLine, e.hits, e.hidden, e.merged = 0, 0, false, false
+	e.lostLine, e.hits, e.gone, e.hidden, e.merged = 0, 0, 0, false, false
 	l.live, l.band = true, b
 	l.f, l.c, l.at, l.amp, l.uf = m.when(mid), m.c, mid, m.amp, m.uf
 	l.phase = m.turnsAt(mid)
 	l.whole, l.tail = true, true
 	l.seen++
-	if e.sm.span <= 16 && e.sm.span >= 8 { // longer ones share most of their seconds
-		e.sm.rest.follow(mid, l.f, l.uf)
-	}
+	e.learnDrift(mid, x.us)
 	e.takeSmeared(c, l, b, x.haze.mu, mid)
 	return true
 }
@@ -217,7 +234,11 @@ func (e *twoTone) seekLocal(b *band, l *track, end float64) seek {
 	// A little more smear than was seen: its skirts must not pass for the line.
 	x.haze = haze{e.sm.slowly, 1.25*e.sm.sigma + 0.02, carrier, max(l.noise*g*g, 1e-12*x.amp*x.amp)}
 	x.f, x.reach, x.held = e.sm.loc.when(end), 0.7, true
-	x.uf = e.sm.loc.uf * (1 + 2*math.Abs(end-e.sm.loc.at)/max(1, e.sm.span))
+	x.uf = e.sm.loc.uf * widen(end-e.sm.loc.at, e.sm.span)
+	x.since, x.was, x.wasU = e.sm.seen, x.f, x.uf+2*x.us*(end-e.sm.seen)
+	if e.sm.turned {
+		x.was = math.NaN()
+	}
 	if e.sm.span == 0 { // anywhere about the carrier
 		x.f, x.reach, x.held = carrier, farReach, false
 	}
@@ -269,7 +290,7 @@ func (e *twoTone) hide(b *band, l *track, mid float64) bool {
 	} else {
 		e.dim = 0
 	}
-	if e.sm.absent {
+	if e.sm.could > 0 && e.sm.absent == e.sm.could {
 		e.gone++
 	} else {
 		e.gone = 0
@@ -333,4 +354,12 @@ func (e *twoTone) remember(mid float64) {
 	if !math.IsNaN(e.sm.beat) {
 		e.anchor.add(mid, c.f, math.Hypot(c.uf, 0.001))
 	}
+}
+
+// hiddenWhy says what a local that is lost in the carrier's smear needs.
+func (e *twoTone) hiddenWhy() string {
+	if t := e.sm.needs(e.memory.ampL); !math.IsNaN(t) {
+		return fmt.Sprintf("the local is somewhere in the carrier's smear: needs about %.0f s at rest", t)
+	}
+	return fmt.Sprintf("the local is somewhere in the carrier's smear and too weak for its middle: needs more than %.0f s at rest, a louder local, or a beat of more than %.1f Hz", longSpan, 4*e.sm.sigma)
 }

@@ -208,8 +208,9 @@ func (w *whitener) refine(f, c, c0, uc float64) (f1, c1, uf float64, b complex12
 // against it, and the latest that can tell speak for it. A line that has left,
 // or that stood elsewhere at first, has the long span's whole gain from seconds
 // in which it was there; each sample's log-likelihood tells (Page's cumulative
-// sum, Biometrika 1954, from memory). The level is left free from lo to hi.
-func (w *whitener) bears(f, c float64, b complex128, lo, hi float64) bool {
+// sum, Biometrika 1954, from memory). A gain control that halves the line's level
+// for a while does not make a part speak against it.
+func (w *whitener) bears(f, c float64, b complex128) bool {
 	m := cmplx.Abs(b)
 	if m == 0 || len(w.v) == 0 {
 		return false
@@ -234,16 +235,15 @@ func (w *whitener) bears(f, c float64, b complex128, lo, hi float64) bool {
 		e *= r
 		r *= rr
 	}
-	// The gain of part i..j by the level that suits it best, what the line would
-	// gain there, and whether it stands there in phase.
+	// The gain of part i..j, what the line would gain there, and whether it stands
+	// there in phase.
 	part := func(i, j int) (gain, most float64, inPhase bool) {
 		q, g := w.q[j]-w.q[i], w.g[j]-w.g[i]
 		if g <= 0 {
 			return 0, 0, true
 		}
-		a := max(lo, min(hi, real(q)/g))
 		most = m * m * g
-		return 2*a*real(q) - a*a*g, most, most < telling ||
+		return 2*m*real(q) - most, most, most < telling ||
 			math.Abs(cmplx.Phase(q)) < phaseSlack+3.5/math.Sqrt(2*most)
 	}
 	n := len(w.v)
