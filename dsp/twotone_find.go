@@ -14,7 +14,7 @@ func (e *twoTone) scan(b *band, want int) int {
 		l.fit.r = append(l.fit.r[:0], l.win.z...)
 	}
 	var no [8]float64
-	refused := no[:0]
+	refused := e.word.inBand(no[:0], b)
 	for tries := 0; len(l.lines) < want && tries < 8; tries++ {
 		e.avoid = append(l.freqs(e.avoid[:0]), refused...)
 		l.specOf = -1
@@ -102,6 +102,7 @@ func (e *twoTone) standsAlone(b *band, f float64) bool {
 // them up from the sound that is kept.
 func (e *twoTone) begin(i int64, mid float64) {
 	x, q := e.raw.tail(int64(math.Ceil((mid+0.5+edge)*e.cfg.Rate)), e.acq.need())
+	e.stray()
 	centres, _ := e.choose(e.acq.search(x, q))
 	if len(centres) == 0 {
 		return
@@ -139,7 +140,7 @@ func (e *twoTone) begin(i int64, mid float64) {
 // choose picks the one or two tones that are wanted from the lines found, and
 // the centres of the one or two bands in which they are followed.
 func (e *twoTone) choose(lines []found) (centres, tones []float64) {
-	if len(lines) == 0 {
+	if lines = e.word.without(lines); len(lines) == 0 {
 		return nil, nil
 	}
 	s, d0 := e.cfg.sign(), e.cfg.SetOff()

@@ -14,7 +14,7 @@ func (e *twoTone) identify(mid float64) {
 			return
 		}
 		if e.local < 0 {
-			e.local = e.whichIsLocal(mid)
+			e.local = e.recognise(mid)
 		}
 		if e.local >= 0 && e.isSpread() {
 			e.remember(mid)
@@ -133,6 +133,8 @@ func (e *twoTone) reading(mid float64) Reading {
 	default:
 		e.sayBoth(&r, mid, scale)
 	}
+	e.mark(&r)
+	e.step.second(e, mid)
 	return r
 }
 
@@ -279,6 +281,9 @@ func (e *twoTone) glimpse(from, upto float64, g *Glimpse) {
 	if e.local >= 0 {
 		g.State = Apart
 		a, b = &e.tr[1-e.local], &e.tr[e.local]
+	}
+	if e.word.doubt != "" {
+		return
 	}
 	span := max(upto-from, min(1, 2.5/math.Abs(a.f-b.f)))
 	mid := upto - span/2

@@ -107,6 +107,7 @@ func (e *twoTone) floor(b *band, f float64) float64 {
 // settle takes the line for the local and what lies beside it for the carrier.
 func (e *twoTone) settle(b *band, mid, line, carrier, amp, power, width, n0 float64) {
 	e.local, e.merged, e.jumped = 1, false, true
+	e.word.lost()
 	e.count.broken()
 	g := b.gain(line - b.centre)
 	c, l := &e.tr[0], &e.tr[1]
