@@ -79,10 +79,8 @@ func (e *twoTone) nearest(hz float64) (int, error) {
 		return 0, fmt.Errorf("tone %g Hz: must be a frequency", hz)
 	}
 	near, reach, heard := -1, 3.0, ""
-	if e.held() == 2 {
-		reach = max(reach, math.Abs(e.tr[0].f-e.tr[1].f)/3)
-	}
-	for k := range e.tr {
+	for i := range e.tr {
+		k := e.ordered(i)
 		if t := &e.tr[k]; t.live {
 			if heard != "" {
 				heard += " and "
@@ -92,6 +90,9 @@ func (e *twoTone) nearest(hz float64) (int, error) {
 				near = k
 			}
 		}
+	}
+	if e.held() == 2 {
+		reach = max(reach, math.Abs(e.tr[0].f-e.tr[1].f)/3)
 	}
 	d := math.Abs(e.tr[near].f*scale - hz)
 	switch {

@@ -17,6 +17,9 @@ func (e *twoTone) spot(mid float64) bool {
 	if len(e.bands) != 1 || math.Abs(e.cfg.SetOff()) >= 10 || e.cfg.Wired {
 		return false
 	}
+	if e.local >= 0 && e.word.local != "" && !e.merged {
+		return false // a tone that comes and goes is no smear where it is known whose it is
+	}
 	b, st := e.bands[0], &e.pair.st
 	e.slow.fetch(st, mid+0.5, spotSpan, e.slow.centre, int(math.Ceil(spotSpan*2.2*spotReach)))
 	if st.valid < 0.95 {
