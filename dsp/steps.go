@@ -204,13 +204,15 @@ func (s *step) listen(e *twoTone, mid float64) bool {
 			}
 		}
 	}
-	if !a.there {
+	// What is left of a tone that went, or what leaks into its place, leads nowhere.
+	follow := [2]bool{a.there && !s.gone(0), b.there && !s.gone(1)}
+	if !follow[0] {
 		moved[0] = moved[1]
 	}
-	if !b.there {
+	if !follow[1] {
 		moved[1] = moved[0]
 	}
-	if a.there || b.there {
+	if follow[0] || follow[1] {
 		a.f += 0.5 * moved[0]
 		b.f += 0.5 * moved[1]
 	}

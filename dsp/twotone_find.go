@@ -157,11 +157,15 @@ func (e *twoTone) choose(lines []found) (centres, tones []float64) {
 	}
 	// Without a hint the pair must lie where the set-off says; of several, the
 	// strongest.
+	far := s * d0
+	if m := &e.memory; m.known { // or where it was
+		far = m.local - m.carrier
+	}
 	best, at := 0.0, -1
 	var with *found
 	for k, c := range lines {
-		p := partner(lines, k, c.f+s*d0)
-		if p == nil || math.Abs(p.f-c.f-s*d0) > pull {
+		p := partner(lines, k, c.f+far)
+		if p == nil || math.Abs(p.f-c.f-far) > pull {
 			continue
 		}
 		if v := c.amp * p.amp; v > best {

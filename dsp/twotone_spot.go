@@ -49,7 +49,7 @@ func (e *twoTone) spot(mid float64) bool {
 		far1 += d * g
 		far2 += d * g * g
 	}
-	if far <= 0 || beside > 0.5*a2 || a2*spotSpan < 40*n0 {
+	if far <= 0 || !lasts(p.fit.r, n0/st.dt) || beside > 0.5*a2 || a2*spotSpan < 40*n0 {
 		return false
 	}
 	mean := far1 / far
@@ -83,6 +83,22 @@ func (e *twoTone) spot(mid float64) bool {
 	e.spotted = 0
 	e.settle(b, mid, f+st.centre, mean+st.centre, math.Sqrt(a2), far, width, n0)
 	return true
+}
+
+// lasts reports whether what is in r, beyond noise of the given power, is there in
+// every quarter: a tone that has just come is as wide as a smear, and is none.
+func lasts(r []complex128, noise float64) bool {
+	least, most := math.Inf(1), 0.0
+	for k := range 4 {
+		part := r[k*len(r)/4 : (k+1)*len(r)/4]
+		sum := 0.0
+		for _, z := range part {
+			sum += real(z)*real(z) + imag(z)*imag(z)
+		}
+		p := sum/float64(max(1, len(part))) - noise
+		least, most = min(least, p), max(most, p)
+	}
+	return least > 0.05*most
 }
 
 // lineAt fits one line near f in the stretch.
