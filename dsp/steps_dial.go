@@ -51,8 +51,10 @@ func (s *step) watchDial(e *twoTone, mid float64) {
 		s.end(Failed, "the two tones did not stand for %d s on end: begin again when they do", steadyFor)
 	case d.alone:
 		s.end(Failed, "only one tone is heard since the dial was moved: put it back, and begin again with a smaller move")
-	case !d.begun || ok:
-		s.end(Failed, "no tone moved by more than %g Hz within %.0f s: begin again", dialLeast, stepPatience)
+	case !d.begun:
+		s.end(Failed, "no tone moved within %.0f s: begin again", stepPatience)
+	case ok:
+		s.end(Failed, "moved by less than %g Hz, or by as much as the tones are apart, the dial shows nothing: begin again with another move", dialLeast)
 	default:
 		s.end(Failed, "the tones were lost when the dial was moved: put it back, and begin again with a smaller move")
 	}
