@@ -21,6 +21,9 @@ type scene struct {
 	cfg  dsp.Config
 	note float64 // whatever the row wants to remember
 	from float64 // rows look at readings after this time, s
+
+	ask   dsp.Step // what the user is guided through, from askAt s on; empty: nothing
+	askAt float64
 }
 
 // played is a scene after it was played.
@@ -30,6 +33,10 @@ type played struct {
 	readings []dsp.Reading
 	summary  dsp.Summary
 	cpu      time.Duration
+
+	progress  dsp.Progress // of the step
+	settledAt int          // how many readings there were when it was settled
+	failures  int
 }
 
 // sign of the beat in the audio.
@@ -69,6 +76,7 @@ func play(s scene) (played, error) {
 		began := time.Now()
 		d.Gap(blk.Lost)
 		d.Samples(blk.Ch)
+		p.guide(d)
 		p.cpu += time.Since(began)
 	}
 	d.Finish()
