@@ -2,6 +2,7 @@ package dsp
 
 import (
 	"math"
+	"math/cmplx"
 )
 
 const (
@@ -49,7 +50,7 @@ func (e *twoTone) spot(mid float64) bool {
 		far1 += d * g
 		far2 += d * g * g
 	}
-	if far <= 0 || !lasts(p.fit.r, n0/st.dt) || beside > 0.5*a2 || a2*spotSpan < 40*n0 {
+	if far <= 0 || !p.lasts(a, f, c, n0/st.dt) || beside > 0.5*a2 || a2*spotSpan < 40*n0 {
 		return false
 	}
 	mean := far1 / far
@@ -85,18 +86,28 @@ func (e *twoTone) spot(mid float64) bool {
 	return true
 }
 
-// lasts reports whether what is in r, beyond noise of the given power, is there in
-// every quarter: a tone that has just come is as wide as a smear, and is none.
-func lasts(r []complex128, noise float64) bool {
+// lasts reports whether a line and what is left beside it, beyond noise of the given
+// power, are there in every quarter of the stretch: a tone that has just come, or
+// that hopped with the dial, is as wide as a smear, and is none.
+func (p *pair) lasts(a complex128, f, c, noise float64) bool {
+	st, r := &p.st, p.fit.r
 	least, most := math.Inf(1), 0.0
+	e, q, qq := chirped(f, c, st.t0, st.dt)
 	for k := range 4 {
 		part := r[k*len(r)/4 : (k+1)*len(r)/4]
-		sum := 0.0
+		n := float64(max(1, len(part)))
+		sum, line := 0.0, complex(0, 0)
 		for _, z := range part {
 			sum += real(z)*real(z) + imag(z)*imag(z)
+			line += z * cmplx.Conj(e)
+			e *= q
+			q *= qq
 		}
-		p := sum/float64(max(1, len(part))) - noise
-		least, most = min(least, p), max(most, p)
+		if cmplx.Abs(a+line/complex(n, 0)) < 0.35*cmplx.Abs(a) {
+			return false
+		}
+		v := sum/n - noise
+		least, most = min(least, v), max(most, v)
 	}
 	return least > 0.05*most
 }

@@ -38,14 +38,13 @@ func (p *played) namesLocal() (settled, right bool) {
 	return true, math.Abs(f-t.LocalTone) < math.Abs(f-t.CarrierTone)
 }
 
-// stepped is a scene at whose bench a step is taken: a carrier that may fade, no
-// hint or a wrong one, levels that differ, perhaps gain control and drift.
+// stepped is a scene at whose bench a step is taken: a carrier that may fade, a
+// hint or none, levels that differ, perhaps gain control and drift.
 func stepped(r *rand.Rand, ask dsp.Step) scene {
 	s := base(r, either(r)*(2.5+9*r.Float64()))
 	s.ask, s.askAt = ask, 12
-	s.cfg.LocalTone = 0
 	if r.IntN(2) == 0 {
-		s.cfg.LocalTone = s.sim.Tone // wrong
+		s.cfg.LocalTone = 0
 	}
 	s.sim.CarrierCN0 = 45 + 15*r.Float64()
 	s.sim.LocalDBFS = s.sim.CarrierDBFS + 10*(2*r.Float64()-1)
@@ -150,6 +149,9 @@ func stepRows() []row {
 		{name: "steps: pull the wire",
 			make: func(r *rand.Rand) scene {
 				s := stepped(r, dsp.PullWire)
+				if r.IntN(2) == 0 {
+					s.cfg.LocalTone = s.sim.Tone // that is the carrier's
+				}
 				for at := 22 + 4*r.Float64(); len(s.sim.LocalAway) < 4; at += 26 + 8*r.Float64() { // three pulls and one more
 					s.sim.LocalAway = append(s.sim.LocalAway, [2]float64{at, at + 12})
 				}
@@ -176,6 +178,12 @@ func stepRows() []row {
 				s.sim.Duration = 130
 				return s
 			},
-			judge: judgeDial, worse: unsettled},
+			judge: judgeDial, worse: func(p *played) float64 {
+				n := unsettled(p) + float64(p.mistakenFrom(p.settledAt))
+				if p.progress.Stage == dsp.Settled && !strings.Contains(p.progress.Text, "both tones moved") {
+					n += 1000
+				}
+				return n
+			}},
 	}
 }
