@@ -127,6 +127,10 @@ func (s *smear) find(b *band, x *seek) bool {
 		s.span = 0
 		return false
 	}
+	if s.gone(b, &best, x) {
+		s.span = 0
+		return false
+	}
 	s.moving(best.span <= 4)
 	s.loc, s.span = best.m, best.span
 	s.lever = leverage(best.span)

@@ -153,6 +153,7 @@ func (s *step) movedAlike(e *twoTone, by float64) {
 	if e.local < 0 && s.local >= 0 { // lost on the way, but known again
 		e.assign(e.ordered(s.local))
 	}
+	e.slow.forget() // what was heard before lies elsewhere
 	t := &e.word
 	t.moved, t.astray, t.doubt = true, false, ""
 	s.end(Settled, "both tones moved by %+.1f Hz with the dial: both come in through the aerial socket", by)

@@ -224,6 +224,7 @@ func (s *step) returned(e *twoTone, mid float64) {
 	}
 	e.asked = true
 	e.assign(l)
+	e.slow.forget() // a line that was away for a while must not be looked for there
 	e.word.local = "it vanished when the wire was pulled"
 	s.end(Settled, "the tone at %.1f Hz is the local's: it went with the wire and came back with it", e.tr[l].f*(1+e.cfg.SampleRateError))
 }

@@ -93,8 +93,18 @@ func judgePull(all []played) []figure {
 	}
 }
 
+// movedAt says that the dial is moved in the second of reading i.
+func (p *played) movedAt(i int) bool {
+	for _, x := range p.sim.Retunes {
+		if int(x.At) == i {
+			return true
+		}
+	}
+	return false
+}
+
 func judgeDial(all []played) []figure {
-	alike, other, unproven, seconds, later := 0, 0, 0, 0, 0
+	alike, other, unproven, seconds, wrong, later := 0, 0, 0, 0, 0, 0
 	for i := range all {
 		p := &all[i]
 		switch {
@@ -105,8 +115,13 @@ func judgeDial(all []played) []figure {
 			continue
 		}
 		alike++
-		later += p.mistakenFrom(p.settledAt)
-		for _, r := range p.readings[p.settledAt:] {
+		all := p.mistakenFrom(p.settledAt)
+		for i := p.settledAt; i < len(p.readings); i++ {
+			r := &p.readings[i]
+			if p.movedAt(i + 1) { // with no step under way
+				later += p.mistakenFrom(i)
+				break
+			}
 			if r.State == dsp.Apart {
 				seconds++
 				if r.Has(dsp.Unproven) {
@@ -114,13 +129,16 @@ func judgeDial(all []played) []figure {
 				}
 			}
 		}
+		wrong += all
 	}
+	wrong -= later
 	return []figure{
 		least("both seen to move alike", percent(alike, len(all)), 95, "%"),
 		most("settled otherwise", float64(other), 0, ""),
 		most("seconds apart but unproven after that", float64(unproven), 0, ""),
 		told("seconds apart after that", float64(seconds), ""),
-		most("wrong seconds after that", float64(later), 0, ""),
+		most("wrong seconds after that", float64(wrong), 0, ""),
+		told("wrong seconds after further moves without a step", float64(later), ""),
 	}
 }
 
