@@ -116,5 +116,8 @@ func (s *slow) put(y complex128, ok bool) {
 	s.next++
 }
 
+// forget drops what is kept: no span reaches back beyond now.
+func (s *slow) forget() { clear(s.ok) }
+
 // upto returns the time up to which samples have been made, s.
 func (s *slow) upto() float64 { return s.time(s.next - 1) }

@@ -51,6 +51,8 @@ type twoTone struct {
 	jumped   bool
 	alone    int // seconds since only one tone has been held
 	memory   pairMemory
+	word     word // what the user said or showed of them
+	step     step
 	cand     float64 // a possible second tone, Hz, and how often it was seen in a row
 	candN    int
 	count    phaseCount

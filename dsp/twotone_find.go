@@ -17,7 +17,7 @@ func (e *twoTone) scan(b *band, want int) int {
 		l.fit.r = append(l.fit.r[:0], l.win.z...)
 	}
 	var no [8]float64
-	refused := no[:0]
+	refused := e.word.inBand(no[:0], b)
 	for tries := 0; len(l.lines) < want && tries < 8; tries++ {
 		e.avoid = append(l.freqs(e.avoid[:0]), refused...)
 		l.specOf = -1
@@ -178,6 +178,7 @@ func (e *twoTone) humAt(b *band, f float64) bool {
 // begin searches the whole input for the tones and, where it finds some, takes
 // them up from the sound that is kept.
 func (e *twoTone) begin(i int64, mid float64) {
+	e.stray()
 	centres, _ := e.choose(e.heard(mid))
 	if len(centres) == 0 {
 		return
@@ -240,7 +241,7 @@ func (e *twoTone) hint() float64 {
 // choose picks the one or two tones that are wanted from the lines found, and
 // the centres of the one or two bands in which they are followed.
 func (e *twoTone) choose(lines []found) (centres, tones []float64) {
-	if len(lines) == 0 {
+	if lines = e.word.without(lines); len(lines) == 0 {
 		return nil, nil
 	}
 	s, d0 := e.cfg.sign(), e.cfg.SetOff()
@@ -257,11 +258,15 @@ func (e *twoTone) choose(lines []found) (centres, tones []float64) {
 	}
 	// Without a hint the pair must lie where the set-off says; of several, the
 	// strongest.
+	far := s * d0
+	if m := &e.memory; m.known { // or where it was
+		far = m.local - m.carrier
+	}
 	best, at := 0.0, -1
 	var with *found
 	for k, c := range lines {
-		p := partner(lines, k, c.f+s*d0)
-		if p == nil || math.Abs(p.f-c.f-s*d0) > pull {
+		p := partner(lines, k, c.f+far)
+		if p == nil || math.Abs(p.f-c.f-far) > pull {
 			continue
 		}
 		if v := c.amp * p.amp; v > best {

@@ -16,9 +16,12 @@ func (e *twoTone) identify(mid float64) {
 		}
 		switch {
 		case e.belief.on:
-			e.weigh(mid)
+			unknown := e.local < 0
+			if e.weigh(mid); unknown && e.local >= 0 {
+				e.word.local = ""
+			}
 		case e.local < 0:
-			e.local = e.whichIsLocal(mid)
+			e.local = e.recognise(mid)
 		}
 		defer e.trust()
 		if e.local >= 0 && e.isSpread() {
@@ -157,6 +160,8 @@ func (e *twoTone) reading(mid float64) Reading {
 	default:
 		e.sayBoth(&r, mid, scale)
 	}
+	e.mark(&r)
+	e.step.second(e, mid)
 	return r
 }
 
@@ -301,6 +306,9 @@ func (e *twoTone) glimpse(from, upto float64, g *Glimpse) {
 	if e.local >= 0 {
 		g.State = Apart
 		a, b = &e.tr[1-e.local], &e.tr[e.local]
+	}
+	if e.word.doubt != "" {
+		return
 	}
 	span := max(upto-from, min(1, 2.5/math.Abs(a.f-b.f)))
 	mid := upto - span/2

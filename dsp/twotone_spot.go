@@ -2,6 +2,7 @@ package dsp
 
 import (
 	"math"
+	"math/cmplx"
 )
 
 const (
@@ -16,6 +17,9 @@ const (
 func (e *twoTone) spot(mid float64) bool {
 	if len(e.bands) != 1 || math.Abs(e.cfg.SetOff()) >= 10 || e.cfg.Wired {
 		return false
+	}
+	if e.local >= 0 && e.word.local != "" && !e.merged {
+		return false // a tone that comes and goes is no smear where it is known whose it is
 	}
 	b, st := e.bands[0], &e.pair.st
 	e.slow.fetch(st, mid+0.5, spotSpan, e.slow.centre, int(math.Ceil(spotSpan*2.2*spotReach)))
@@ -68,7 +72,7 @@ func (e *twoTone) spot(mid float64) bool {
 			return false
 		}
 	}
-	if !lasts(p.fit.r, n0/st.dt) {
+	if !p.lasts(a, f, c, n0/st.dt) {
 		return false // a tone that came or went
 	}
 	if e.spotted == 0 || math.Abs(f+st.centre-e.spotAt) > 0.1 {
@@ -143,18 +147,30 @@ func (e *twoTone) beyond(st *stretch, f, n0 float64) smudge {
 	return y
 }
 
-// lasts reports whether what is in r, beside noise of power noise, is there in
-// its first and in its last quarter as in the whole.
-func lasts(r []complex128, noise float64) bool {
-	power := func(z []complex128) (sum float64) {
-		for _, v := range z {
-			sum += real(v)*real(v) + imag(v)*imag(v)
+// lasts reports whether a line and what is left beside it, beyond noise of the given
+// power, are there in every quarter of the stretch: a tone that has just come, or
+// that hopped with the dial, is as wide as a smear, and is none.
+func (p *pair) lasts(a complex128, f, c, noise float64) bool {
+	st, r := &p.st, p.fit.r
+	least, most := math.Inf(1), 0.0
+	e, q, qq := chirped(f, c, st.t0, st.dt)
+	for k := range 4 {
+		part := r[k*len(r)/4 : (k+1)*len(r)/4]
+		n := float64(max(1, len(part)))
+		sum, line := 0.0, complex(0, 0)
+		for _, z := range part {
+			sum += real(z)*real(z) + imag(z)*imag(z)
+			line += z * cmplx.Conj(e)
+			e *= q
+			q *= qq
 		}
-		return sum/float64(max(1, len(z))) - noise
+		if cmplx.Abs(a+line/complex(n, 0)) < 0.35*cmplx.Abs(a) {
+			return false
+		}
+		v := sum/n - noise
+		least, most = min(least, v), max(most, v)
 	}
-	q := len(r) / 4
-	least := 0.1 * power(r)
-	return power(r[:q]) > least && power(r[len(r)-q:]) > least
+	return least > 0.05*most
 }
 
 // lineAt fits one line near f in the stretch.
@@ -182,6 +198,7 @@ func (e *twoTone) floor(b *band, f float64) float64 {
 // settle takes the line for the local and what lies beside it for the carrier.
 func (e *twoTone) settle(b *band, mid, line, carrier, amp, power, width, n0 float64) {
 	e.local, e.merged, e.jumped = 1, false, true
+	e.word.lost()
 	e.count.broken()
 	g := b.gain(line - b.centre)
 	c, l := &e.tr[0], &e.tr[1]

@@ -98,7 +98,7 @@ func (e *twoTone) learnDrift(mid, us float64) {
 	case sm.span > 64 && sm.info > 3*telling && mid-sm.learnt > sm.span/2:
 		own := math.Sqrt(60) * sm.loc.uf / sm.span
 		sm.learnt = mid
-		sm.rest.set(mid, sm.loc.when(mid), 4*sm.loc.uf, sm.loc.c, us*own/math.Hypot(us, own))
+		sm.rest.set(mid, sm.loc.when(mid), 4*sm.loc.uf, sm.loc.c, us*own/math.Hypot(us, own), sm.span)
 	}
 }
 

@@ -18,6 +18,7 @@ func table() []row {
 	t = append(t, fadingRows()...)
 	t = append(t, smearRows()...)
 	t = append(t, identityRows()...)
+	t = append(t, stepRows()...)
 	t = append(t, nothingRows()...)
 	t = append(t, weakRows()...)
 	t = append(t, clockRows()...)

@@ -22,6 +22,9 @@ type scene struct {
 	cfg  dsp.Config
 	note float64 // whatever the row wants to remember
 	from float64 // rows look at readings after this time, s
+
+	ask   dsp.Step // what the user is guided through, from askAt s on; empty: nothing
+	askAt float64
 }
 
 // played is a scene after it was played.
@@ -31,6 +34,10 @@ type played struct {
 	readings []dsp.Reading
 	summary  dsp.Summary
 	cpu      time.Duration
+
+	progress  dsp.Progress // of the step
+	settledAt int          // how many readings there were when it was settled
+	failures  int
 }
 
 // sign of the beat in the audio.
@@ -70,6 +77,7 @@ func play(s scene) (played, error) {
 		began := time.Now()
 		d.Gap(blk.Lost)
 		d.Samples(blk.Ch)
+		p.guide(d)
 		p.cpu += time.Since(began)
 	}
 	d.Finish()
@@ -175,7 +183,7 @@ func (w *row) run(seed uint64, scenes, workers int, only uint64, verbose bool, o
 func (w *row) worst(all []played, out io.Writer) {
 	sort.Slice(all, func(i, j int) bool { return w.worse(&all[i]) > w.worse(&all[j]) })
 	for _, p := range all[:min(4, len(all))] {
-		fmt.Fprintf(out, "  worse %.4g: %+v local tone %g\n     summary %.5f u %.5f %s\n", w.worse(&p), p.sim, p.cfg.LocalTone, p.summary.Beat, p.summary.BeatU, p.summary.Method)
+		fmt.Fprintf(out, "  worse %.4g: %+v local tone %g\n     %s summary %.5f u %.5f %s\n", w.worse(&p), p.sim, p.cfg.LocalTone, p.progress.Text, p.summary.Beat, p.summary.BeatU, p.summary.Method)
 		for i, r := range p.readings {
 			t := p.truthAt(i)
 			fmt.Fprintf(out, "     %6.1f %-9s %9.5f u %8.2g span %5.1f truth %9.5f recv %9.5f C %8.3f L %8.3f (%8.3f %8.3f) lev %6.2f %6.2f run %d sp %.3f %v %s\n", r.T, r.State, r.Beat, r.BeatU, r.Span, t.Beat, t.Received,

@@ -38,11 +38,14 @@ type desk struct {
 	runBase int // added to the numbers of phase runs in the journal
 	lastRun int
 
-	mu      sync.Mutex
-	failing string // why no samples come; empty: they do, or may
-	since   time.Time
-	ended   bool
-	readAt  time.Time // host time of the latest reading
+	errands errands // to the bench's goroutine
+
+	mu       sync.Mutex
+	progress dsp.Progress // of the guided step
+	failing  string       // why no samples come; empty: they do, or may
+	since    time.Time
+	ended    bool
+	readAt   time.Time // host time of the latest reading
 }
 
 func (d *desk) opened(f capture.Format, cfg dsp.Config) {

@@ -52,6 +52,12 @@ type listener interface {
 	trouble(err error)                        // the input failed; nil: it ended
 }
 
+// helper is a listener through which the user acts upon the bench.
+type helper interface {
+	sends() errands                       // what is to be done on the bench's goroutine
+	stepped(at time.Time, p dsp.Progress) // how far the guided step is, after every reading
+}
+
 // ear is the queue between a feed and a bench.
 type ear struct {
 	channels []int // wanted, 1-based
@@ -110,18 +116,19 @@ func (e *ear) tell(err error) {
 
 // bench is the goroutine that turns blocks into readings.
 type bench struct {
-	set    settings
-	ear    *ear
-	out    listener
-	fill   bool // count sound as missing while nothing arrives
-	now    func() time.Time
-	dsp    *dsp.Bench
-	line   timeline
-	open   int   // the opening of the input that dsp was made for
-	planes []int // which planes of a block are ours
-	ch     [][]float32
-	kept   func() bool // the host's clock is disciplined
-	marked int64       // the sample of the line that the host's clock was read for last
+	set     settings
+	ear     *ear
+	out     listener
+	fill    bool // count sound as missing while nothing arrives
+	now     func() time.Time
+	dsp     *dsp.Bench
+	line    timeline
+	open    int   // the opening of the input that dsp was made for
+	planes  []int // which planes of a block are ours
+	ch      [][]float32
+	kept    func() bool // the host's clock is disciplined
+	errands errands     // of the listener; nil: none
+	marked  int64       // the sample of the line that the host's clock was read for last
 }
 
 // newBench returns a bench that is not running yet. fill says that its input is
@@ -134,6 +141,9 @@ func newBench(set settings, out listener, fill bool) *bench {
 	}
 	b := &bench{set: set, out: out, fill: fill, now: time.Now, kept: hostClockKept, ear: newEar(set.channels(), depth)}
 	b.ear.drops = fill
+	if h, ok := out.(helper); ok {
+		b.errands = h.sends()
+	}
 	return b
 }
 
@@ -154,6 +164,8 @@ func (b *bench) run(stop <-chan struct{}) {
 				return
 			}
 			b.take(s)
+		case f := <-b.errands:
+			f(b.dsp)
 		case err := <-b.ear.trouble:
 			b.drain()
 			b.out.trouble(err)
@@ -274,7 +286,12 @@ func (b *bench) reopened(s *shared) error {
 		return nil
 	}
 	cfg := b.set.config(s.format.Rate)
-	cfg.OnReading = func(r dsp.Reading) { b.out.reading(b.line.at(r.T), r) }
+	cfg.OnReading = func(r dsp.Reading) {
+		b.out.reading(b.line.at(r.T), r)
+		if h, ok := b.out.(helper); ok {
+			h.stepped(b.line.at(r.T), b.dsp.Progress())
+		}
+	}
 	if g, ok := b.out.(interface{ wantsGlimpses() bool }); ok && g.wantsGlimpses() {
 		cfg.OnGlimpse = func(g dsp.Glimpse) { b.out.glimpse(b.now(), g) }
 	}

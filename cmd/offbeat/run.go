@@ -5,6 +5,7 @@ import (
 	"errors"
 	"fmt"
 	"log/slog"
+	"math"
 	"os"
 	"os/signal"
 	"path/filepath"
@@ -93,7 +94,7 @@ func runDaemon(ctx context.Context, c *command, args []string, std stdio) error 
 	version, revision := buildVersion()
 	d.meters = metrics.New(metrics.BuildInfo{Version: version, Revision: revision, GoVersion: runtime.Version()})
 	server, err := web.Listen(web.Config{Listen: d.cfg.Listen, WebConfigFile: d.cfg.WebConfig, Insecure: d.cfg.Insecure, Log: d.log},
-		web.Handlers{Metrics: d.meters.Handler(), Page: web.Page(d.meters, version), Health: d.health, Ready: d.ready})
+		web.Handlers{Metrics: d.meters.Handler(), Page: web.Page(d.meters, version), API: web.API(d), Health: d.health, Ready: d.ready})
 	if err != nil {
 		return err
 	}
@@ -296,7 +297,8 @@ func (d *daemon) engage(s settings) listener {
 	for _, c := range capture.Causes {
 		causes = append(causes, string(c))
 	}
-	k := &desk{name: s.Name, input: s.Input.String(), log: d.log.With("bench", s.Name), keep: d.book}
+	k := &desk{name: s.Name, input: s.Input.String(), log: d.log.With("bench", s.Name), keep: d.book, errands: make(errands)}
+	k.progress.Stage, k.progress.Left = dsp.NoStep, math.NaN()
 	k.meter = d.meters.Bench(s.Name, metrics.BenchInfo{Hookup: string(cfg.Hookup), Sideband: string(cfg.Sideband),
 		CarrierHz: cfg.Carrier, LocalHz: cfg.Local, Input: k.input}, causes...)
 	d.book.Setup(s.Name, journal.Setup{Hookup: string(cfg.Hookup), Sideband: string(cfg.Sideband), CarrierHz: cfg.Carrier, LocalHz: cfg.Local, Input: k.input})

@@ -40,7 +40,9 @@ const (
 	Thinned = "thinned"
 	Restart = "restart" // the daemon did not end cleanly; data tells the extent
 	Reload  = "reload"
-	Trouble = "journal" // of the journal itself
+	// Identity: the user said which tone is which, or a guided step began or ended.
+	Identity = "identity"
+	Trouble  = "journal" // of the journal itself
 )
 
 // Options of a journal. Zero values mean the defaults.

@@ -1,5 +1,5 @@
 // Package web serves what a daemon has to say over HTTP: /metrics, /healthz,
-// /readyz and a page. TLS and basic authentication come from the web
+// /readyz, a page and its API. TLS and basic authentication come from the web
 // configuration file that Prometheus' own exporters use.
 package web
 
@@ -32,6 +32,7 @@ type Config struct {
 type Handlers struct {
 	Metrics http.Handler
 	Page    http.Handler // of /, may be nil
+	API     http.Handler // of /api/v1/, may be nil
 	Health  func() []string
 	Ready   func() []string
 }
@@ -164,8 +165,11 @@ func mux(h Handlers) http.Handler {
 	if h.Page != nil {
 		m.Handle("/{$}", h.Page)
 	}
+	if h.API != nil {
+		m.Handle("/api/v1/", h.API)
+	}
 	return http.HandlerFunc(func(w http.ResponseWriter, r *http.Request) {
-		if r.Method != http.MethodGet && r.Method != http.MethodHead {
+		if r.Method != http.MethodGet && r.Method != http.MethodHead && !strings.HasPrefix(r.URL.Path, "/api/v1/") {
 			w.Header().Set("Allow", "GET, HEAD")
 			http.Error(w, "only GET and HEAD here", http.StatusMethodNotAllowed)
 			return
