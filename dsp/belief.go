@@ -151,6 +151,7 @@ func (e *twoTone) trust() {
 // only on certainty.
 func (e *twoTone) weigh(mid float64) {
 	b := &e.belief
+	known := e.local >= 0
 	b.seen = mid
 	b.add(&e.tr, mid, 1)
 	odds := e.odds()
@@ -166,8 +167,12 @@ func (e *twoTone) weigh(mid float64) {
 		e.count.broken()
 		return
 	}
-	if e.local >= 0 {
+	if e.local >= 0 && !known {
+		scatter := e.anchor.scatter
 		e.anchor = b.c[1-e.local]
+		e.anchor.scatter = scatter
+	}
+	if e.local >= 0 {
 		b.on = mid-b.since < beliefSeconds
 	}
 }

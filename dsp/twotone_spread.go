@@ -151,7 +151,7 @@ func (e *twoTone) lookBeside(c *track, mid float64) {
 	if w := e.sm.width(n0 / (g * g) * phasorRate / a2); !math.IsNaN(w) && !e.sm.turns && e.sm.clear() {
 		e.sm.sigma = w
 	}
-	if e.sm.n%(5*phasorRate) == 0 && e.sm.clear() && e.sm.still > 30 {
+	if e.sm.n%(5*phasorRate) == 0 && e.sm.clear() {
 		e.sm.steady = e.sm.inOneLine(n0 / (g * g) * phasorRate / a2)
 	}
 }
