@@ -205,7 +205,11 @@ func (l *steadyLine) density() (v float64, ok bool) {
 	if n < 6 {
 		return 0, false
 	}
-	return sum / n, true
+	// Few tapers are scattered, and a formula (that of a Gaussian spectrum as
+	// wide) is blind: both are heard, as in byPower.
+	v = sum / n
+	known := dd / float64(points) / (math.Sqrt(2*math.Pi) * width)
+	return (sum + 12*max(known, v/4)) / (n + 12), true
 }
 
 // taper fills x with sine taper k where there are points, orthogonal to every
