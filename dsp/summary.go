@@ -65,6 +65,7 @@ type Summer struct {
 	n       int
 	states  map[State]float64
 	usable  int
+	cuts    int32
 	tau0    int // seconds between points
 	t0      float64
 	clock   clockSay  // of the latest reading
@@ -72,6 +73,7 @@ type Summer struct {
 	beat    []float64 // by the nominal clock, Hz; signed if signed, else its size
 	u       []float64
 	run     []int32
+	cut     []int32 // runs of one cut count the cycles of the same pair of tones
 	span    []float64 // seconds of sound that the point's reading rests on
 	level   []float64 // of the carrier by the local, amplitude; 0 where there is no beat
 	w, wf   []float64 // power and power times beat, summed over the point's seconds
@@ -112,6 +114,9 @@ func (s *Summer) Add(r Reading) {
 		s.spread += r.SpreadHz
 		s.spreadN++
 	}
+	if r.Has(Gap) || r.Has(Retuned) {
+		s.cuts++
+	}
 	level := s.weigh(&r, beat)
 	s.clock = clockSay{e: r.ClockError, u: r.ClockErrorU, from: r.ClockFrom}
 	// The clock is known better later on: until the end beats are kept by the
@@ -127,6 +132,7 @@ func (s *Summer) Add(r Reading) {
 			s.beat = append(s.beat, beat)
 			s.u = append(s.u, r.BeatU)
 			s.run = append(s.run, int32(r.PhaseRun))
+			s.cut = append(s.cut, s.cuts)
 			s.span = append(s.span, r.Span)
 			s.level = append(s.level, level)
 			s.w, s.wf = append(s.w, 0), append(s.wf, 0)
@@ -157,12 +163,12 @@ func (s *Summer) weigh(r *Reading, beat float64) float64 {
 func (s *Summer) halve() {
 	for i := range summaryPoints / 2 {
 		s.phase[i], s.beat[i], s.u[i], s.run[i], s.level[i] = s.phase[2*i], s.beat[2*i], s.u[2*i], s.run[2*i], s.level[2*i]
-		s.span[i] = s.span[2*i]
+		s.span[i], s.cut[i] = s.span[2*i], s.cut[2*i]
 		s.w[i], s.wf[i] = s.w[2*i]+s.w[2*i+1], s.wf[2*i]+s.wf[2*i+1]
 	}
 	n := summaryPoints / 2
 	s.phase, s.beat, s.u, s.run, s.level = s.phase[:n], s.beat[:n], s.u[:n], s.run[:n], s.level[:n]
-	s.w, s.wf, s.span = s.w[:n], s.wf[:n], s.span[:n]
+	s.w, s.wf, s.span, s.cut = s.w[:n], s.wf[:n], s.span[:n], s.cut[:n]
 	s.tau0 *= 2
 }
 

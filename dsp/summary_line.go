@@ -17,7 +17,6 @@ type steadyLine struct {
 	t    []float64    // seconds about the middle of the stretch's points; 0 where there is none
 	sxx  float64      // sum of t^2
 	n    []float64    // points of every stretch
-	base float64      // mean power of the steady part
 	held float64      // what the stretches' sums explain of the power, score(f)
 }
 
@@ -57,7 +56,7 @@ func (s *Summer) coherent() (mean, u float64, ok bool) {
 	if !ok {
 		return 0, 0, false
 	}
-	if one, yes := l.joined(v); yes {
+	if one, yes := l.joined(v, s.cut); yes {
 		if w, ok := one.density(); ok {
 			l, v = *one, w
 		}
@@ -141,13 +140,11 @@ func (l *steadyLine) climb(f0 float64, steps int, span float64) (runnerUp float6
 func (l *steadyLine) leave() {
 	l.d, l.t = make([]float64, len(l.z)), make([]float64, len(l.z))
 	l.n, l.sxx = make([]float64, len(l.from)), 0
-	all := 0.0
 	l.eachStretch(func(k, lo, hi int) {
 		y, n := l.sum(lo, hi, l.f)
 		if l.n[k] = n; n == 0 {
 			return
 		}
-		all += n
 		b := y / complex(n, 0)
 		mid := 0.0
 		for i := lo; i < hi; i++ {
@@ -163,7 +160,6 @@ func (l *steadyLine) leave() {
 			}
 		}
 	})
-	l.base = l.held / max(1, all)
 }
 
 // density returns the density of the remaining phase near frequency zero, per
@@ -173,12 +169,9 @@ func (l *steadyLine) leave() {
 // the density is flat: to half the rms width of what fades.
 func (l *steadyLine) density() (v float64, ok bool) {
 	var dd, jumps float64
-	points := 0
+	points := l.points()
 	for i, d := range l.d {
 		dd += d * d
-		if l.z[i] != 0 {
-			points++
-		}
 		if i > 0 && l.z[i] != 0 && l.z[i-1] != 0 {
 			jumps += (d - l.d[i-1]) * (d - l.d[i-1])
 		}
@@ -187,10 +180,10 @@ func (l *steadyLine) density() (v float64, ok bool) {
 		return 0, false
 	}
 	width := math.Sqrt(jumps/dd) / (2 * math.Pi) // cycles a point
-	last := int(max(8, min(width*float64(len(l.z)), float64(points)/4, 60)))
+	last := int(max(8, min(width*float64(len(l.z)), points/4, 60)))
 	sum, n := 0.0, 0.0
 	taper := make([]float64, len(l.z))
-	for k := 1; k <= last || n < 8 && k < points/2; k++ {
+	for k := 1; k <= last || n < 8 && float64(k) < points/2; k++ {
 		was, left := l.taper(taper, k)
 		if left < 0.3*was {
 			continue
@@ -208,7 +201,7 @@ func (l *steadyLine) density() (v float64, ok bool) {
 	// Few tapers are scattered, and a formula (that of a Gaussian spectrum as
 	// wide) is blind: both are heard, as in byPower.
 	v = sum / n
-	known := dd / float64(points) / (math.Sqrt(2*math.Pi) * width)
+	known := dd / points / (math.Sqrt(2*math.Pi) * width)
 	return (sum + 12*max(known, v/4)) / (n + 12), true
 }
 
@@ -243,42 +236,58 @@ func (l *steadyLine) taper(x []float64, k int) (was, left float64) {
 	return was, left
 }
 
-// joined takes all stretches as one. That is right if the frequency they agree
-// on leaves no doubt of the cycles between them, and if their phases then fit;
-// v is the density of what is left of the phase while they stand alone.
-func (l *steadyLine) joined(v float64) (*steadyLine, bool) {
-	if len(l.from) < 2 {
+// joined takes stretches together that have no cut between them. That is right
+// if the frequency they agree on leaves no doubt of the cycles between them, and
+// if their phases then fit; v is the density of what is left of the phase while
+// they stand alone.
+func (l *steadyLine) joined(v float64, cut []int32) (*steadyLine, bool) {
+	one := &steadyLine{dt: l.dt, z: l.z}
+	l.eachStretch(func(k, lo, hi int) {
+		if k == 0 || cut[lo] != cut[lo-1] {
+			one.from = append(one.from, lo)
+		}
+	})
+	fewer := l.phases() - one.phases()
+	if fewer == 0 {
 		return nil, false
 	}
-	first, last := 0, len(l.z)-1
-	for l.z[first] == 0 {
-		first++
-	}
-	for l.z[last] == 0 {
-		last--
-	}
-	span := float64(last-first+1) * l.dt
+	span := 0.0
+	one.eachStretch(func(_, lo, hi int) { span = max(span, float64(hi-lo)*l.dt) })
 	reach := 5 * math.Sqrt(v/l.sxx) / (2 * math.Pi)
 	steps := 10 + int(reach/0.3*span)
 	if steps > 500 {
 		return nil, false
 	}
-	one := &steadyLine{dt: l.dt, z: l.z, from: []int{0}}
 	other := one.climb(l.f, steps, span)
 	// Twice the logarithm of a likelihood ratio is a difference of scores by the
-	// density of one quadrature.
-	unit := v * l.base
-	free := 0.0
-	for _, n := range l.n {
-		if n > 0 {
-			free++
-		}
-	}
-	free--
-	misfit := (l.score(one.f) - one.held) / unit
-	if one.held-other < 25*unit || misfit > free+4*math.Sqrt(2*free)+6 {
+	// density of one quadrature. A phase less, amplitude and phase, costs about
+	// two, of a density that is itself known to a quarter; so much more than that
+	// comes from phases that do not fit.
+	unit := v * l.held / l.points()
+	misfit, free := (l.held-one.held)/unit, 2*fewer+1
+	if one.held-other < 16*unit || misfit > 1.5*free+6*math.Sqrt(2*free) {
 		return nil, false
 	}
 	one.leave()
 	return one, true
+}
+
+// phases returns the number of stretches with something in them.
+func (l *steadyLine) phases() (n float64) {
+	l.eachStretch(func(_, lo, hi int) {
+		if y, _ := l.sum(lo, hi, 0); y != 0 {
+			n++
+		}
+	})
+	return n
+}
+
+// points returns the number of phasors.
+func (l *steadyLine) points() (n float64) {
+	for _, z := range l.z {
+		if z != 0 {
+			n++
+		}
+	}
+	return n
 }
