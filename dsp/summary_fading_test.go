@@ -4,6 +4,7 @@ import (
 	"math"
 	"math/cmplx"
 	"math/rand/v2"
+	"sort"
 	"testing"
 )
 
@@ -13,9 +14,11 @@ import (
 // carrier; phase adds to the phase count of a run, cycles.
 type fadingRun struct {
 	beat, k, sigma float64
+	shift          float64 // of a second path as strong, Hz; 0: there is none
 	seconds        int
 	gone           func(s int) bool
 	run            func(s int) int
+	pair           float64 // out: the mean frequency of all phasors at once, Hz
 	phase          func(run int) float64
 }
 
@@ -30,19 +33,27 @@ func (c *fadingRun) readings(r *rand.Rand) []Reading {
 		sum += taps[i] * taps[i]
 	}
 	n := c.seconds*rate + 1
-	w := make([]complex128, n+2*reach)
-	for i := range w {
-		w[i] = complex(r.NormFloat64(), r.NormFloat64())
+	paths := []float64{0}
+	if c.shift != 0 {
+		paths = append(paths, c.shift)
 	}
-	part := math.Sqrt(1 / (1 + c.k) / sum / 2)
+	part := math.Sqrt(1 / (1 + c.k) / sum / 2 / float64(len(paths)))
 	z := make([]complex128, n)
-	for i := range z {
-		for j, h := range taps {
-			z[i] += w[i+j] * complex(h, 0)
+	w := make([]complex128, n+2*reach)
+	for _, shift := range paths {
+		for i := range w {
+			w[i] = complex(r.NormFloat64(), r.NormFloat64())
 		}
-		z[i] = z[i]*complex(part, 0) + complex(math.Sqrt(c.k/(1+c.k)), 0)
+		for i := range z {
+			y := complex(math.Sqrt(c.k/(1+c.k)), 0)
+			for j, h := range taps {
+				y += w[i+j] * complex(h*part, 0)
+			}
+			z[i] += y * cmplx.Rect(1, 2*math.Pi*shift*float64(i)/rate)
+		}
 	}
 	var out []Reading
+	var all complex128
 	for s := range c.seconds {
 		q := Blank(float64(s)+0.5, Apart)
 		if c.run != nil {
@@ -56,8 +67,9 @@ func (c *fadingRun) readings(r *rand.Rand) []Reading {
 				power += real(z[i]*cmplx.Conj(z[i])) / rate
 				at += z[i]
 			}
+			all += pair
 			q.Beat = c.beat + cphase(pair)*rate
-			q.BeatU, q.Span, q.SpreadHz = 0.001, 1, c.sigma/math.Sqrt(1+c.k)
+			q.BeatU, q.Span, q.SpreadHz = 0.001, 1, math.Hypot(c.sigma, c.shift/2)/math.Sqrt(1+c.k)
 			q.Phase = c.beat*q.T + cphase(at)
 			if c.phase != nil {
 				q.Phase += c.phase(q.PhaseRun)
@@ -67,6 +79,7 @@ func (c *fadingRun) readings(r *rand.Rand) []Reading {
 		}
 		out = append(out, q)
 	}
+	c.pair = c.beat + cphase(all)*rate
 	return out
 }
 
@@ -181,6 +194,61 @@ func TestSteadyPart(t *testing.T) {
 			t.Logf("seed %d: rms %.3g Hz, expected %.3g, rms(error/u) %.2f, within 2u %.0f %%", seed, rms, want, honest, 100*inside/n)
 			if !(rms < 1.25*want) || !(honest > 0.7 && honest < 1.2) || !(inside > 0.9*n) {
 				t.Errorf("seed %d: rms error %.3g Hz, expected %.3g; rms(error/u) %.2f; within 2u %.0f %%", seed, rms, want, honest, 100*inside/n)
+			}
+		})
+	}
+}
+
+// The mean of a carrier that fades altogether, against the limit of the
+// pulse-pair mean: sqrt(integral (f-mu)^2 S^2 df / T) / integral S df, which is
+// sqrt(sigma / (4 sqrt(pi) T)) for one Gaussian (Zrnic 1977; from memory).
+func TestFadingMean(t *testing.T) {
+	for _, c := range []struct {
+		name         string
+		sigma, shift float64
+		seconds      int
+	}{
+		{"0.1 Hz, 2 min", 0.1, 0, 120},
+		{"0.1 Hz lopsided, 2 min", 0.1, 0.2, 120},
+		{"0.1 Hz, 30 min", 0.1, 0, 1800},
+		{"0.1 Hz lopsided, 30 min", 0.1, 0.2, 1800},
+		{"0.5 Hz, 30 min", 0.5, 0, 1800},
+		{"0.5 Hz lopsided, 30 min", 0.5, 1, 1800},
+	} {
+		t.Run(c.name, func(t *testing.T) {
+			const seed = 13
+			scenes := min(100, 40*1800/c.seconds)
+			r := rand.New(rand.NewPCG(seed, 2))
+			var a, b float64
+			for f := -8 * c.sigma; f < c.shift+8*c.sigma; f += c.sigma / 50 {
+				s := math.Exp(-f*f/(2*c.sigma*c.sigma)) + math.Exp(-(f-c.shift)*(f-c.shift)/(2*c.sigma*c.sigma))
+				a += (f - c.shift/2) * (f - c.shift/2) * s * s * c.sigma / 50
+				b += s * c.sigma / 50
+			}
+			limit := math.Sqrt(a/float64(c.seconds)) / b
+			var se, sq, n, inside float64
+			var us []float64
+			for range scenes {
+				run := fadingRun{beat: 2 + 4*r.Float64(), sigma: c.sigma, shift: c.shift, seconds: c.seconds}
+				sum := summarise(Config{LocalTone: 1000}, run.readings(r))
+				// Slow reference: the pulse pair of the whole run at once.
+				if d := math.Abs(float64(sum.Beat) - run.pair); !(d < 0.25*limit) {
+					t.Errorf("seed %d: %.5f Hz, all at once %.5f (%s)", seed, sum.Beat, run.pair, sum.Method)
+				}
+				e := float64(sum.Beat) - run.beat - c.shift/2
+				se += e * e
+				sq += e * e / float64(sum.BeatU*sum.BeatU)
+				if math.Abs(e) <= 2*float64(sum.BeatU) {
+					inside++
+				}
+				n++
+				us = append(us, float64(sum.BeatU))
+			}
+			sort.Float64s(us)
+			rms, u := math.Sqrt(se/n)/limit, us[len(us)/2]/limit
+			t.Logf("seed %d: rms/limit %.2f, rms(error/u) %.2f, within 2u %.1f %%, median u/limit %.2f", seed, rms, math.Sqrt(sq/n), 100*inside/n, u)
+			if rms > 1+3/math.Sqrt(2*n) || rms < 0.7 || inside < 0.87*n || u < 0.85 || u > 1.2 {
+				t.Errorf("seed %d: rms/limit %.2f, within 2u %.1f %%, median u/limit %.2f", seed, rms, 100*inside/n, u)
 			}
 		})
 	}
