@@ -84,6 +84,7 @@ type smear struct {
 	absent, could int     // spans in which no line of the local's level stands anywhere, of those in which one would show
 	seen          float64 // when the local's line was last seen, s
 	turned        bool    // and whether it was being turned then
+	bends         bool    // the line found is being turned
 	inside        bool    // the line was found within the smear
 	learnt        float64 // when the drift was last learnt from a long span, s
 	dense         float64 // density of the smear at its middle, as reckoned with

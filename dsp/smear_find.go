@@ -191,7 +191,7 @@ func (s *smear) find(b *band, x *seek) bool {
 		return false
 	}
 	s.moving(best.span <= 4)
-	s.seen, s.turned = x.end, best.turn != 0
+	s.bends = best.turn != 0
 	s.loc, s.span = best.m, best.span
 	s.lever, s.info = leverage(best.span), best.info
 	return true

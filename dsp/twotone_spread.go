@@ -206,6 +206,7 @@ func (e *twoTone) followSpread(mid float64) bool {
 		e.count.broken()
 		e.jumped = true
 	}
+	e.sm.seen, e.sm.turned = end, e.sm.bends
 	m := &e.sm.loc
 	if e.hidden {
 		e.sm.mean = x.haze.mu - m.when(end)
@@ -246,25 +247,25 @@ func (e *twoTone) seekLocal(b *band, l *track, end float64) seek {
 }
 
 // trusts reports whether the line just found is to be believed: not one that
-// turns close to the smear, and after it was lost only one that has rested for
-// some seconds and was found twice.
+// turns close to the smear, and after it was lost only one that was found again
+// from second to second: twice if it has rested for some, oftener if not.
 func (e *twoTone) trusts(x *seek) bool {
-	sep := math.Abs(e.sm.loc.when(x.end) - x.haze.mu)
-	if e.sm.span <= 4 && sep < 1+4*e.sm.sigma {
+	m := &e.sm.loc
+	at := m.when(x.end)
+	short := e.sm.span < 8
+	if short && math.Abs(at-x.haze.mu) < 1+4*e.sm.sigma {
+		e.hits = 0
 		return false
 	}
 	if !e.hidden {
 		return true
 	}
-	if e.sm.span < 8 {
-		return false
-	}
-	if math.Abs(e.sm.loc.when(x.end)-e.hitAt) > 0.1 {
+	if math.Abs(m.when(x.end-1)-e.hitAt) > 0.1 {
 		e.hits = 0
 	}
-	e.hitAt = e.sm.loc.when(x.end)
+	e.hitAt = at
 	e.hits++
-	return e.hits >= 2
+	return e.hits >= 4 || e.hits >= 2 && !short
 }
 
 // hide says that the local's line is somewhere in the smear. For a while it is
