@@ -84,7 +84,10 @@ type smear struct {
 	absent, could int     // spans in which no line of the local's level stands anywhere, of those in which one would show
 	seen          float64 // when the local's line was last seen, s
 	turned        bool    // and whether it was being turned then
+	bends         bool    // the line found is being turned
 	inside        bool    // the line was found within the smear
+	gain          gain    // of the receiver
+	flat          bool    // loc's amplitude is that at gain 1
 	learnt        float64 // when the drift was last learnt from a long span, s
 	dense         float64 // density of the smear at its middle, as reckoned with
 	rest          anchor  // the local's own frequency, and with it the receiver's drift

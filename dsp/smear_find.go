@@ -191,8 +191,8 @@ func (s *smear) find(b *band, x *seek) bool {
 		return false
 	}
 	s.moving(best.span <= 4)
-	s.seen, s.turned = x.end, best.turn != 0
-	s.loc, s.span = best.m, best.span
+	s.bends = best.turn != 0
+	s.loc, s.span, s.flat = best.m, best.span, true
 	s.lever, s.info = leverage(best.span), best.info
 	return true
 }
@@ -213,6 +213,7 @@ func (s *smear) try(b *band, span float64, x *seek) (hit, bool) {
 		return out, false
 	}
 	d := x.end - st.mid
+	s.gain.flatten(st)
 	s.straighten(x.slope)
 	h := x.haze
 	h.mu -= x.slope*d + centre
@@ -335,6 +336,7 @@ func (s *smear) crowd(x *seek) float64 {
 	st, was := &s.st, x.haze.power
 	const rate = 12
 	s.slow.fetch(st, x.end, crowdSpan, x.haze.mu, crowdSpan*rate)
+	s.gain.flatten(st)
 	p, have := 0.0, 0.0
 	for i, z := range st.z {
 		p += real(z)*real(z) + imag(z)*imag(z)

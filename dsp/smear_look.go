@@ -61,8 +61,13 @@ func (s *smear) frame(w *window, b *band, mid float64) {
 	q := cmplx.Rect(1, 2*math.Pi*f*w.dt+math.Pi*c*w.dt*w.dt)
 	qq := cmplx.Rect(1, 2*math.Pi*c*w.dt*w.dt)
 	amp := complex(s.loc.amp*b.gain(f), 0)
+	from, to := 1.0, 1.0
+	if s.flat {
+		from, to = s.gain.at(t), s.gain.at(mid-w.t0)
+	}
 	for i, z := range w.z {
-		s.dft[i] = z*cmplx.Conj(e) - amp
+		g := from + (to-from)*float64(i)/float64(len(w.z))
+		s.dft[i] = z*cmplx.Conj(e) - amp*complex(g, 0)
 		if !w.ok[i] {
 			s.dft[i] = 0
 		}
@@ -126,7 +131,12 @@ func (s *smear) moments(w *window, centre, reach, n0 float64) moments {
 // away with it, beside the carrier's.
 func (s *smear) doubt(m *moments) float64 {
 	u := math.Hypot(m.u, s.loc.uf)
-	if left := s.back() / m.power; left > 0 {
+	left := s.back()
+	if s.flat {
+		d := s.gain.flutter() * s.loc.amp
+		left += d * d
+	}
+	if left /= m.power; left > 0 {
 		u = math.Hypot(u, math.Sqrt(min(1, left))*math.Hypot(s.sigma, m.mean))
 	}
 	return u

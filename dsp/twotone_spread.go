@@ -27,7 +27,7 @@ func (e *twoTone) fade(mid float64) {
 	slope, us := e.drift(mid)
 	dt := mid - e.sm.loc.at
 	turning := dt > 5 || math.Abs(guess.f-e.sm.loc.f-slope*dt) > 0.008+5*l.uf+3*us*dt
-	e.sm.loc, e.sm.span, e.sm.lever = guess, 1, 0
+	e.sm.loc, e.sm.span, e.sm.lever, e.sm.flat = guess, 1, 0, false
 	e.sm.moving(turning)
 	e.sm.rest.follow(mid, l.f, l.uf)
 	e.sm.seen, e.sm.turned = mid+0.5, turning
@@ -127,6 +127,10 @@ func (e *twoTone) lookBeside(c *track, mid float64) {
 		want = e.sm.mean
 	}
 	n0 := e.noiseBeside(ln, b, e.sm.loc.f+want)
+	e.sm.gain.hear(mid, n0)
+	if e.sm.span == 1 && e.sm.clear() {
+		e.sm.gain.learn(e.sm.loc.amp)
+	}
 	e.sm.look(ln, b, mid, want, n0)
 	if !math.IsNaN(e.sm.beat) {
 		w := 0.1
@@ -198,6 +202,11 @@ func (e *twoTone) followSpread(mid float64) bool {
 	b := l.band
 	e.advance(l, c)
 	end := mid + 0.5
+	if e.hidden {
+		ln := e.lens
+		ln.open(b, mid, 1, edge)
+		e.sm.gain.hear(mid, e.noiseBeside(ln, b, e.sm.home.f))
+	}
 	x := e.seekLocal(b, l, end)
 	if !e.sm.find(b, &x) || !e.trusts(&x) {
 		return e.hide(b, l, mid)
@@ -206,13 +215,14 @@ func (e *twoTone) followSpread(mid float64) bool {
 		e.count.broken()
 		e.jumped = true
 	}
+	e.sm.seen, e.sm.turned = end, e.sm.bends
 	m := &e.sm.loc
 	if e.hidden {
 		e.sm.mean = x.haze.mu - m.when(end)
 	}
 	e.lostLine, e.hits, e.gone, e.hidden, e.merged = 0, 0, 0, false, false
 	l.live, l.band = true, b
-	l.f, l.c, l.at, l.amp, l.uf = m.when(mid), m.c, mid, m.amp, m.uf
+	l.f, l.c, l.at, l.amp, l.uf = m.when(mid), m.c, mid, m.amp*e.sm.gain.at(mid), m.uf
 	l.phase = m.turnsAt(mid)
 	l.whole, l.tail = true, true
 	l.seen++
@@ -225,6 +235,9 @@ func (e *twoTone) followSpread(mid float64) bool {
 func (e *twoTone) seekLocal(b *band, l *track, end float64) seek {
 	g := b.gain(l.f - b.centre)
 	x := seek{end: end, amp: e.memory.ampL * g}
+	if e.sm.gain.on {
+		x.amp = e.sm.gain.level() * g
+	}
 	x.slope, x.us = e.drift(end)
 	carrier, _ := e.anchor.when(end)
 	if h := &e.sm.home; h.w > 0 {
@@ -246,25 +259,25 @@ func (e *twoTone) seekLocal(b *band, l *track, end float64) seek {
 }
 
 // trusts reports whether the line just found is to be believed: not one that
-// turns close to the smear, and after it was lost only one that has rested for
-// some seconds and was found twice.
+// turns close to the smear, and after it was lost only one that was found again
+// from second to second: twice if it has rested for some, oftener if not.
 func (e *twoTone) trusts(x *seek) bool {
-	sep := math.Abs(e.sm.loc.when(x.end) - x.haze.mu)
-	if e.sm.span <= 4 && sep < 1+4*e.sm.sigma {
+	m := &e.sm.loc
+	at := m.when(x.end)
+	short := e.sm.span < 8
+	if short && math.Abs(at-x.haze.mu) < 1+4*e.sm.sigma {
+		e.hits = 0
 		return false
 	}
 	if !e.hidden {
 		return true
 	}
-	if e.sm.span < 8 {
-		return false
-	}
-	if math.Abs(e.sm.loc.when(x.end)-e.hitAt) > 0.1 {
+	if math.Abs(m.when(x.end-1)-e.hitAt) > 0.1 {
 		e.hits = 0
 	}
-	e.hitAt = e.sm.loc.when(x.end)
+	e.hitAt = at
 	e.hits++
-	return e.hits >= 2
+	return e.hits >= 4 || e.hits >= 2 && !short
 }
 
 // hide says that the local's line is somewhere in the smear. For a while it is
@@ -348,7 +361,7 @@ func (e *twoTone) remember(mid float64) {
 	m.at, m.carrier, m.local = mid, c.f, l.f
 	m.seconds++
 	m.ampC += 0.05 * (c.amp - m.ampC)
-	if r := l.amp / m.ampL; e.sm.info > 4*telling && r > 0.85 && r < 1.18 {
+	if r := l.amp / m.ampL; e.sm.info > 4*telling && r > 0.85 && r < 1.18 && !e.sm.gain.on {
 		m.ampL += 0.05 * (l.amp - m.ampL)
 	}
 	if !math.IsNaN(e.sm.beat) {
