@@ -192,7 +192,7 @@ func (s *step) strange(e *twoTone) {
 	if e.held() == 2 && !e.merged {
 		for i := range e.tr {
 			t, o := &e.tr[i], &e.tr[1-i]
-			if t.whole && o.whole && math.Abs(o.f-stays) < 0.8 && math.Abs(t.f-want) > 0.7 {
+			if t.whole && o.whole && math.Abs(o.f-stays) < 0.8 && math.Abs(t.f-want) > 0.7 && math.Abs(t.f-stays) > holdApart {
 				new = t.f
 			}
 		}

@@ -16,12 +16,13 @@ func (p *played) guide(d *dsp.Bench) {
 	if p.ask == "" || float64(len(p.readings)) < p.askAt || p.progress.Stage == dsp.Settled {
 		return
 	}
+	was := p.progress.Stage
 	p.progress = d.Progress()
 	switch p.progress.Stage {
 	case dsp.Settled:
 		p.settledAt = len(p.readings)
 	case dsp.NoStep, dsp.Failed, dsp.Cancelled:
-		if p.progress.Stage == dsp.Failed {
+		if was != p.progress.Stage && p.progress.Stage == dsp.Failed {
 			p.failures++
 		}
 		_ = d.Ask(p.ask) // where that is refused now, in a second it may not be
@@ -69,8 +70,26 @@ func (p *played) mistakenFrom(from int) (n int) {
 	return n
 }
 
+// restAfter returns the readings after the step up to the next time that the dial
+// is moved or the wire pulled, with no step under way, as from, to.
+func (p *played) restAfter() (from, to int) {
+	for to = p.settledAt; to < len(p.readings); to++ {
+		for _, x := range p.sim.Retunes {
+			if int(x.At) == to+1 {
+				return p.settledAt, to
+			}
+		}
+		for _, x := range p.sim.LocalAway {
+			if int(x[0]) == to+1 {
+				return p.settledAt, to
+			}
+		}
+	}
+	return p.settledAt, to
+}
+
 func judgePull(all []played) []figure {
-	settled, wrong, later, failures := 0, 0, 0, 0
+	settled, wrong, after, later, failures := 0, 0, 0, 0, 0
 	var took []float64
 	for i := range all {
 		p := &all[i]
@@ -81,26 +100,19 @@ func judgePull(all []played) []figure {
 			if !right {
 				wrong++
 			}
-			later += p.mistakenFrom(p.settledAt)
+			from, to := p.restAfter()
+			after += p.mistakenFrom(from) - p.mistakenFrom(to)
+			later += p.mistakenFrom(to)
 		}
 	}
 	return []figure{
 		least("settled", percent(settled, len(all)), 95, "%"),
 		most("settled on the wrong tone", float64(wrong), 0, ""),
-		most("wrong seconds after that", float64(later), 0, ""),
+		most("wrong seconds after that", float64(after), 0, ""),
+		told("wrong seconds after further pulls without a step", float64(later), ""),
 		told("begun again, times", float64(failures), ""),
 		told("median time it took", median(took), "s"),
 	}
-}
-
-// movedAt says that the dial is moved in the second of reading i.
-func (p *played) movedAt(i int) bool {
-	for _, x := range p.sim.Retunes {
-		if int(x.At) == i {
-			return true
-		}
-	}
-	return false
 }
 
 func judgeDial(all []played) []figure {
@@ -115,13 +127,10 @@ func judgeDial(all []played) []figure {
 			continue
 		}
 		alike++
-		all := p.mistakenFrom(p.settledAt)
-		for i := p.settledAt; i < len(p.readings); i++ {
-			r := &p.readings[i]
-			if p.movedAt(i + 1) { // with no step under way
-				later += p.mistakenFrom(i)
-				break
-			}
+		from, to := p.restAfter()
+		wrong += p.mistakenFrom(from) - p.mistakenFrom(to)
+		later += p.mistakenFrom(to)
+		for _, r := range p.readings[from:to] {
 			if r.State == dsp.Apart {
 				seconds++
 				if r.Has(dsp.Unproven) {
@@ -129,9 +138,7 @@ func judgeDial(all []played) []figure {
 				}
 			}
 		}
-		wrong += all
 	}
-	wrong -= later
 	return []figure{
 		least("both seen to move alike", percent(alike, len(all)), 95, "%"),
 		most("settled otherwise", float64(other), 0, ""),
@@ -156,8 +163,12 @@ func unsettled(p *played) float64 {
 	if p.progress.Stage != dsp.Settled {
 		return 1
 	}
-	if ok, right := p.namesLocal(); ok && !right {
-		return 100
+	ok, right := p.namesLocal()
+	if ok && !right {
+		return 1000
+	}
+	if ok {
+		return float64(p.mistakenFrom(p.settledAt))
 	}
 	return 0
 }
