@@ -156,7 +156,12 @@ func (e *twoTone) lookBeside(c *track, mid float64) {
 		e.sm.sigma = w
 	}
 	if e.sm.n%(5*phasorRate) == 0 && e.sm.clear() {
-		e.sm.steady = e.sm.inOneLine(n0 / (g * g) * phasorRate / a2)
+		// A local drawing near spoils it: a carrier known to stand still for the
+		// most part is taken for a smear only beside a local at rest.
+		share := e.sm.inOneLine(n0 / (g * g) * phasorRate / a2)
+		if !(e.sm.steady >= 0.5 && share < 0.5) || e.sm.still > 30 {
+			e.sm.steady = share
+		}
 	}
 }
 
