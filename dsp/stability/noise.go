@@ -110,9 +110,10 @@ func lag1(z []float64) (float64, bool) {
 	return a / b * float64(n-1) / float64(pairs), true
 }
 
-// removeQuadratic subtracts the least-squares quadratic of what is known. Values
-// that are as small as their own rounding become 0.
-func removeQuadratic(z []float64) {
+// removeQuadratic subtracts the least-squares quadratic of what is known and
+// returns its coefficients over a row from -1 to 1. Values that are as small as
+// their own rounding become 0.
+func removeQuadratic(z []float64) [3]float64 {
 	c := float64(len(z)-1) / 2
 	h := max(c, 1)
 	var s [5]float64 // sums of powers of t
@@ -141,6 +142,7 @@ func removeQuadratic(z []float64) {
 			z[i] = 0
 		}
 	}
+	return q
 }
 
 // solve3 solves three linear equations by elimination with pivoting; a
