@@ -221,27 +221,54 @@ type Settling struct {
 	Still bool    // and the end still drifts
 	Early float64 // drift of the first third, 1/s
 	Late  float64 // of the last third
-	U     float64 // standard uncertainty of both
+	U     float64 // standard uncertainty of both, at most
 }
 
 // SettlingOf tells warming up from noise and from even drift: the least-squares
 // slope of the first third must differ from 0, and from that of the last third,
 // by more than three standard uncertainties, and the last third's must be less
-// than two thirds of it. The uncertainty comes from the noise at a ninetieth of
-// the row by the Hadamard deviation, which no drift enters. False if the row is
-// too short for that.
+// than two thirds of it. The uncertainty is 2 sqrt(2) adev(T/6)/(T/3), with the
+// Allan deviation carried on from a third of that tau or less as if the noise
+// were a random walk, the worst there is. False if the row is too short.
 func SettlingOf(x []float64, run []int32, tau0 float64) (Settling, bool) {
 	y := Frequency(x, run, tau0)
-	l, ok := levelOf(x, run, tau0, 90)
 	third := len(y) / 3
-	if !ok || third < 30 {
+	if third < 30 {
 		return Settling{}, false
 	}
-	s := Settling{Early: slope(y[:third], tau0), Late: slope(y[len(y)-third:], tau0), U: l.driftU(float64(third) * tau0)}
-	if math.IsNaN(s.Early + s.Late) {
-		return Settling{}, false
+	T := float64(third) * tau0
+	for m := third / 6; m >= 1; m /= 2 {
+		dev, ok := medianHadamard(x, run, tau0, m)
+		if !ok {
+			continue
+		}
+		adev := dev * math.Sqrt2 * math.Sqrt(T/2/(float64(m)*tau0))
+		s := Settling{Early: slope(y[:third], tau0), Late: slope(y[len(y)-third:], tau0), U: 2 * math.Sqrt2 * adev / T}
+		if math.IsNaN(s.Early + s.Late) {
+			return Settling{}, false
+		}
+		s.Warm = math.Abs(s.Early) > 3*s.U && math.Abs(s.Early-s.Late) > 3*math.Sqrt2*s.U && math.Abs(s.Late) < 2./3*math.Abs(s.Early)
+		s.Still = s.Warm && math.Abs(s.Late) > 2*s.U && s.Early*s.Late > 0
+		return s, true
 	}
-	s.Warm = math.Abs(s.Early) > 3*s.U && math.Abs(s.Early-s.Late) > 3*math.Sqrt2*s.U && math.Abs(s.Late) < 2./3*math.Abs(s.Early)
-	s.Still = s.Warm && math.Abs(s.Late) > 2*s.U && s.Early*s.Late > 0
-	return s, true
+	return Settling{}, false
+}
+
+// medianHadamard is the overlapping Hadamard deviation from the median of the
+// third differences' sizes instead of their squares' mean: neither an even drift
+// nor a short fast one enters. False where gaps leave less than six taus.
+func medianHadamard(x []float64, run []int32, tau0 float64, m int) (float64, bool) {
+	var size []float64
+	for i := 0; i+3*m < len(x); i++ {
+		if run != nil && (run[i] != run[i+m] || run[i] != run[i+2*m] || run[i] != run[i+3*m]) {
+			continue
+		}
+		if d := x[i+3*m] - 3*(x[i+2*m]-x[i+m]) - x[i]; !math.IsNaN(d) {
+			size = append(size, math.Abs(d))
+		}
+	}
+	if len(size) < 6*m || len(size) < 10 {
+		return 0, false
+	}
+	return median(size) / 0.6745 / math.Sqrt(6) / (float64(m) * tau0), true
 }

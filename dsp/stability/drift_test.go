@@ -137,6 +137,7 @@ func TestSettling(t *testing.T) {
 		{"even drift", func(s float64) float64 { return 1e-12 * s }, false, false},
 		{"no drift", func(s float64) float64 { return 3e-7 }, false, false},
 		{"half settled", func(s float64) float64 { return 5e-8 * math.Exp(-s/2500) }, true, true},
+		{"slowly", func(s float64) float64 { return 2e-8 * math.Exp(-s/1600) }, true, true},
 		{"settled", func(s float64) float64 { return -5e-8 * math.Exp(-s/250) }, true, false},
 		{"logarithm", func(s float64) float64 { return -1e-8 * math.Log1p(s/60) }, true, true},
 	} {

@@ -15,8 +15,9 @@ import (
 
 // Row is a reading as it was stored.
 type Row struct {
-	At      time.Time
-	Reading dsp.Reading
+	At                 time.Time
+	Reading            dsp.Reading
+	CarrierHz, LocalHz float64 // nominal, the local as heard
 }
 
 // EventRow is an event as it was stored.
@@ -118,6 +119,7 @@ func (r *Reader) Readings(ctx context.Context, bench string, from, to time.Time,
 			return n[i].Float64 / scale
 		}
 		out.At = time.UnixMilli(t).UTC()
+		out.CarrierHz, out.LocalHz = fc, fl
 		g.T = float64(sound) / 1000
 		if state >= 0 && state < len(dsp.States) {
 			g.State = dsp.States[state]
