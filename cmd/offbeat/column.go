@@ -132,8 +132,8 @@ func (p *columnReader) take(line string) error {
 
 // single reads a line of one number.
 func (p *columnReader) single(line string) error {
-	if v, ok := parseCell(line); ok {
-		p.out.values = append(p.out.values, v)
+	if _, ok := parseCell(line); ok {
+		p.add(line)
 		return nil
 	}
 	if n := len(strings.FieldsFunc(line, func(r rune) bool { return strings.ContainsRune(",; \t", r) })); n > 1 {
@@ -208,7 +208,7 @@ func (p *columnReader) end() (numbers, error) {
 	}
 	o := &p.odd
 	note(o.text, "%s is not a number and counts as missing%s", o.firstText, others(o.text))
-	note(o.infinite, "%d infinite values count as missing", o.infinite)
+	note(o.infinite, "%s counted as missing", plural(o.infinite, "infinite value"))
 	note(o.short, "%s has no such column and counts as missing%s", o.firstShort, others(o.short))
 	note(o.times, "%s is not a time (seconds, or 2006-01-02T15:04:05Z): the line was left out%s", o.firstBad, others(o.times))
 	return p.out, nil

@@ -88,7 +88,7 @@ func (r *row) spread(n numbers, tau0 float64) error {
 			return fmt.Errorf("%s: the times do not tell how far readings are apart: all are the same, or there is one only; say --rate or --interval", r.name)
 		}
 		slices.Sort(steps)
-		tau0 = steps[len(steps)/2]
+		tau0 = steps[(len(steps)-1)/2]
 		// Times written to the millisecond do not make a step of 0.9999 s.
 		if near := math.Round(tau0*1000) / 1000; near > 0 && math.Abs(tau0-near) < 1e-3*near {
 			tau0 = near
@@ -119,10 +119,10 @@ func (r *row) spread(n numbers, tau0 float64) error {
 		taken[k], r.values[k] = true, n.values[i]
 	}
 	if twice > 0 {
-		r.note("%d readings repeat a time, or come less than half a step after another: the first was taken", twice)
+		r.note("%s at a time that is taken, or nearly: the first was kept", plural(twice, "reading"))
 	}
 	if off > 0 {
-		r.note("%d readings lie more than a quarter of a step off the even spacing of %s s", off, number(tau0))
+		r.note("%s more than a quarter of a step off the even spacing of %s s", plural(off, "reading"), number(tau0))
 	}
 	return nil
 }
@@ -131,6 +131,17 @@ func (r *row) spread(n numbers, tau0 float64) error {
 type span struct {
 	path, bench string
 	from, to    time.Time
+}
+
+// openEnd is the end of a span that has none.
+var openEnd = time.Date(9999, 1, 1, 0, 0, 0, 0, time.UTC)
+
+// when words an end of the span, nothing if it is open.
+func (s *span) when(word string, t time.Time) string {
+	if t.IsZero() || t.Equal(openEnd) {
+		return ""
+	}
+	return word + t.Format(time.RFC3339)
 }
 
 // fromJournal reads a span of a journal: one place a second.
@@ -164,7 +175,7 @@ func fromJournal(ctx context.Context, s span, phase bool) (*row, error) {
 		return nil, fmt.Errorf("journal %s: %w", s.path, err)
 	}
 	if len(out.values) == 0 {
-		return nil, fmt.Errorf("bench %s has no reading from %s to %s", s.bench, s.from.Format(time.RFC3339), s.to.Format(time.RFC3339))
+		return nil, fmt.Errorf("bench %s has no reading%s%s", s.bench, s.when(" from ", s.from), s.when(" to ", s.to))
 	}
 	l.end()
 	return out, nil
@@ -221,9 +232,9 @@ func (l *lineUp) add(j journal.Row) error {
 // end notes what was odd.
 func (l *lineUp) end() {
 	if l.begins > 0 {
-		l.note("the sound began anew %d times in this span", l.begins)
+		l.note("the sound began anew in this span: %s", plural(l.begins, "time"))
 	}
 	if l.steps > 0 {
-		l.note("the host's clock was set %d times in this span: seconds were counted by the sound", l.steps)
+		l.note("the host's clock was set in this span (%s): seconds were counted by the sound", plural(l.steps, "time"))
 	}
 }

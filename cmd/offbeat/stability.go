@@ -184,7 +184,7 @@ func (j *judging) flags(c *command, args []string) (files []string, err error) {
 	quantity(f, &j.column.time, "time", parseWords)
 	quantity(f, &j.span.bench, "bench", parseName)
 	quantity(f, &j.span.path, "journal", parseWords)
-	j.span.to = time.Now().UTC()
+	j.span.to = openEnd
 	quantity(f, &j.span.from, "from", parseInstant)
 	quantity(f, &j.span.to, "to", parseInstant)
 	quantity(f, &j.taus, "taus", func(s string) (string, error) { _, err := chooseTaus(s, 2, 0); return s, err })

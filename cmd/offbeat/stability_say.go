@@ -185,12 +185,12 @@ func meanOf(y []float64) float64 {
 // writeHead says what was read.
 func (j *judging) writeHead() {
 	r := j.row
-	what := "frequencies"
+	what := "frequency"
 	if r.phase {
-		what = "phases"
+		what = "phase"
 	}
 	known := r.known()
-	fmt.Fprintf(j.out, "%s: %d %s, %s s apart", r.name, known, what, number(r.tau0))
+	fmt.Fprintf(j.out, "%s: %s, %s s apart", r.name, plural(known, what), number(r.tau0))
 	if n := len(r.values) - known; n > 0 {
 		fmt.Fprintf(j.out, ", %d missing", n)
 	}
