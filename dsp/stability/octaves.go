@@ -79,8 +79,8 @@ func secondOctaves(x []float64) []float64 {
 
 // secondOfFour adds the squares of the second differences at positions lo to hi
 // of the octaves k to k+3, as far as there are any, to sum. With the first
-// differences e(m) = x[i+m] - x[i], the second is e(2m) - 2 e(m): an octave costs
-// one value more.
+// differences e(m) = x[i+m] - x[i], half the second is e(2m)/2 - e(m): an octave
+// costs one value more. (Halving goes through the multiplier: adders are short.)
 func secondOfFour(x []float64, lo, hi, k int, sum []float64) {
 	m := 1 << k
 	all := max(lo, min(hi, len(x)-16*m)) // up to here all four exist
@@ -89,16 +89,16 @@ func secondOfFour(x []float64, lo, hi, k int, sum []float64) {
 		var s0, s1, s2, s3 float64
 		for i, v := range a {
 			e0, e1, e2, e3, e4 := b[i]-v, c[i]-v, d[i]-v, e[i]-v, f[i]-v
-			d0, d1, d2, d3 := e1-(e0+e0), e2-(e1+e1), e3-(e2+e2), e4-(e3+e3)
+			d0, d1, d2, d3 := .5*e1-e0, .5*e2-e1, .5*e3-e2, .5*e4-e3
 			s0 += d0 * d0
 			s1 += d1 * d1
 			s2 += d2 * d2
 			s3 += d3 * d3
 		}
-		sum[0] += s0
-		sum[1] += s1
-		sum[2] += s2
-		sum[3] += s3
+		sum[0] += 4 * s0
+		sum[1] += 4 * s1
+		sum[2] += 4 * s2
+		sum[3] += 4 * s3
 	} else {
 		all = lo
 	}

@@ -371,3 +371,29 @@ func TestEDFIsSmooth(t *testing.T) {
 		}
 	}
 }
+
+// A million frequencies whose noise is the last 20 bits of their numbers: whole
+// numbers keep their phase exactly, so every octave is known exactly.
+func TestPrecisionOfLongRows(t *testing.T) {
+	const n, offset, unit = 1_000_000, 1 << 52, 1. / (1 << 40)
+	y, x := make([]float64, n), make([]int64, n+1)
+	k := int64(1234567890)
+	for i := range y {
+		noise := k >> 11
+		y[i] = float64(offset+noise) * unit
+		x[i+1] = x[i] + noise
+		k = 16807 * k % 2147483647
+	}
+	phase, _ := Phase(y, 1)
+	for _, p := range Octaves(OverlappingAllan, phase, nil, 1) {
+		sum, m := 0.0, p.M
+		for i := 0; i+2*m < len(x); i++ {
+			d := float64(x[i+2*m] - 2*x[i+m] + x[i])
+			sum += d * d
+		}
+		near(t, "octave", p.Dev, math.Sqrt(sum/2/float64(len(x)-2*m))/float64(m)*unit, 1e-11)
+		if one, _ := Overlapping(phase, nil, 1, m); !(math.Abs(one-p.Dev) <= 1e-11*p.Dev) {
+			t.Errorf("m %d alone: %g, with the others %g", m, one, p.Dev)
+		}
+	}
+}

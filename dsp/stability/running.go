@@ -3,7 +3,7 @@ package stability
 import "math"
 
 // Running keeps the overlapping Allan deviation of a row of phases that has no
-// end, at every octave of tau, in bounded memory: about 1.2 kB an octave. Of
+// end, at every octave of tau, in bounded memory: about 0.9 kB an octave. Of
 // every tau it takes positions tau/16 apart (every position below 16 tau0): 16
 // to a tau, against which all positions gain a few per cent of confidence. A new
 // phase costs a fixed few operations, and one more for each octave that its index
