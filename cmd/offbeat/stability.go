@@ -96,6 +96,9 @@ type tauRow struct {
 	EDF     num     `json:"edf"`
 	Low     num     `json:"low"` // limits of oadev
 	High    num     `json:"high"`
+
+	TotalEDF  num `json:"totdev_edf"`  // of the total variance
+	TotalBias num `json:"totdev_bias"` // what it is expected to be over the Allan variance; not taken off
 }
 
 func judgeStability(ctx context.Context, c *command, args []string, std stdio) error {
@@ -342,7 +345,8 @@ func (j *judging) listed() bool { return j.taus != "octave" && j.taus != "decade
 // add computes an averaging time and prints it, if there is anything, or if it
 // was asked for.
 func (j *judging) add(m int) {
-	r := tauRow{Tau: num(float64(m) * j.row.tau0), M: m, EDF: num(math.NaN()), Low: num(math.NaN()), High: num(math.NaN())}
+	r := tauRow{Tau: num(float64(m) * j.row.tau0), M: m, EDF: num(math.NaN()), Low: num(math.NaN()), High: num(math.NaN()),
+		TotalEDF: num(math.NaN()), TotalBias: num(math.NaN())}
 	for d, at := range map[stability.Deviation]*num{
 		stability.Allan: &r.Adev, stability.ModifiedAllan: &r.Mdev, stability.TimeDeviation: &r.Tdev, stability.Hadamard: &r.Hdev,
 		stability.OverlappingHadamard: &r.Ohdev, stability.TotalDeviation: &r.Totdev,
@@ -385,6 +389,7 @@ func (j *judging) limits(r *tauRow) {
 	edf := stability.EDF(a, r.N+2*r.M, r.M)
 	low, high := stability.Limits(float64(r.Oadev), edf, j.confidence)
 	r.EDF, r.Low, r.High = num(edf), num(low), num(high)
+	r.TotalEDF, r.TotalBias = num(stability.TotalDeviation.EDF(a, len(j.x), r.M)), num(stability.TotalBias(a, len(j.x), r.M))
 }
 
 // encode writes one object on a line.

@@ -81,6 +81,9 @@ func TestStabilityPublished(t *testing.T) {
 	if math.Abs(float64(ten.EDF)-146.0723) > 1e-4 || math.Abs(float64(ten.Low)/8.667789e-2-1) > 1e-4 || math.Abs(float64(ten.High)/9.746678e-2-1) > 1e-4 {
 		t.Errorf("%+v", ten)
 	}
+	if ten.TotalEDF != 150 || ten.TotalBias != 1 { // SP 1065 Table 7: 1.5 T/tau; unbiased
+		t.Errorf("total: %+v", ten)
+	}
 	var s struct{ Summary verdict }
 	if err := json.Unmarshal([]byte(lines[3]), &s); err != nil {
 		t.Fatal(err)
