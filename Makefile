@@ -15,7 +15,7 @@ VERSION = $(shell git describe --tags --always --dirty 2>/dev/null || echo devel
 LDFLAGS = -s -w -X main.version=$(VERSION)
 
 .DEFAULT_GOAL := help
-.PHONY: help run build test lint bench bench-accuracy need-sound need-test
+.PHONY: help run build test lint bench bench-accuracy need-sound need-test need-bench
 
 help: ## this list
 	@sed -n 's/^\([a-z][a-z-]*\):.*## \(.*\)/  make \1\t\2/p' $(MAKEFILE_LIST) | expand -t 20
@@ -39,9 +39,10 @@ lint: ## gofmt, go vet, staticcheck
 	CGO_ENABLED=$(CGO) $(GO) vet $(TAGS) ./...
 	CGO_ENABLED=$(CGO) $(GO) tool staticcheck $(TAGS) ./...
 
-bench: build need-test ## the figures: accuracy against the bounds, speed, memory, load
+bench: build need-test need-bench ## the figures: accuracy against the bounds, speed, memory, load
 	OFFBEAT_LONG=1 CGO_ENABLED=$(CGO) $(GO) test $(TAGS) -timeout 60m -count=1 -v -run 'Bound|Bias|NoiseHour|Uncertainty|Quadrature|Mixer' ./dsp | grep -E 'ratio|bias|readings|u/rms|^(---|ok|FAIL)|Hz/|panic'
-	CGO_ENABLED=$(CGO) $(GO) test $(TAGS) -run '^$$' -bench . -benchmem ./dsp ./capture/...
+	OFFBEAT_LONG=1 CGO_ENABLED=$(CGO) $(GO) test $(TAGS) -timeout 10m -count=1 -v -run 'Published|NumPy|Coverage' ./dsp/stability
+	CGO_ENABLED=$(CGO) $(GO) test $(TAGS) -run '^$$' -bench . -benchmem ./dsp/... ./capture/...
 	OFFBEAT_LONG=1 CGO_ENABLED=$(CGO) $(GO) test $(TAGS) -timeout 30m -count=1 -v -run 'TestSpeed|TestLoad|TestMemory|TestExportMemory' ./cmd/offbeat
 
 bench-accuracy: ## every accuracy figure beside its limit (hours)
@@ -49,6 +50,9 @@ bench-accuracy: ## every accuracy figure beside its limit (hours)
 
 need-sound:
 	@$(NEED) "sound-card support" portaudio19-dev pkg-config gcc libc6-dev
+
+need-bench:
+	@$(NEED) "figures beside other programs" python3-numpy
 
 need-test:
 	@$(NEED) "tests against other programs" sox libsox-fmt-all ffmpeg flac sndfile-programs pulseaudio pulseaudio-utils libasound2-plugins prometheus python3-prometheus-client sqlite3

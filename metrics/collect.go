@@ -63,6 +63,9 @@ var (
 	descGaps     = desc("gaps_total", "Gaps by cause.", "bench", "cause")
 	descClipped  = desc("clipped_samples_total", "Samples at or beyond full scale.", "bench")
 	descBad      = desc("nonfinite_samples_total", "Samples that were not a number or infinite, taken as 0.", "bench")
+	descAllan    = desc("allan_deviation_ratio", "Overlapping Allan deviation of the offset at averaging time tau, seconds, since the bench began to listen.", "bench", "tau")
+	descAllanLow = desc("allan_deviation_low_ratio", "Lower 68 % confidence limit of the Allan deviation.", "bench", "tau")
+	descAllanTop = desc("allan_deviation_high_ratio", "Upper 68 % confidence limit of the Allan deviation.", "bench", "tau")
 	descBreaks   = desc("phase_breaks_total", "How often the count of the beat's cycles lost continuity.", "bench")
 
 	descCommitted  = desc("journal_committed_rows_total", "Rows of the journal that are safe on disk.")
@@ -82,7 +85,7 @@ func (e *Exporter) Describe(ch chan<- *prometheus.Desc) {
 		ch <- g.desc.Desc
 	}
 	for _, d := range []metric{descUp, descInfo, descState, descFlag, descLast, descReadings, descFlagged, descSamples, descLost,
-		descGaps, descClipped, descBad, descBreaks, descCommitted, descPending, descDropped, descJErrors, descBytes, descLastCommit,
+		descGaps, descClipped, descBad, descBreaks, descAllan, descAllanLow, descAllanTop, descCommitted, descPending, descDropped, descJErrors, descBytes, descLastCommit,
 		descReloadOK, descReloadAt} {
 		ch <- d.Desc
 	}
@@ -157,6 +160,14 @@ func (b *Bench) collect(ch chan<- prometheus.Metric, name string) {
 	counter(ch, descClipped, b.clipped, name)
 	counter(ch, descBad, b.nonFinite, name)
 	counter(ch, descBreaks, b.breaks, name)
+	for _, s := range b.allan.r.States(nil, oneSigma) {
+		tau := plain(s.Tau)
+		gauge(ch, descAllan, s.Dev, name, tau)
+		if known(s.Low) && known(s.High) {
+			gauge(ch, descAllanLow, s.Low, name, tau)
+			gauge(ch, descAllanTop, s.High, name, tau)
+		}
+	}
 }
 
 func gauge(ch chan<- prometheus.Metric, d metric, v float64, labels ...string) {

@@ -19,6 +19,7 @@ import (
 	"github.com/prometheus/client_golang/prometheus/promhttp"
 
 	"offbeat/dsp"
+	"offbeat/dsp/stability"
 )
 
 // BuildInfo says which program this is.
@@ -93,6 +94,7 @@ type Bench struct {
 	breaks    float64
 	gaps      map[string]float64
 	run       int
+	allan     *allan
 }
 
 // Bench adds a bench, or returns the one of that name with new particulars.
@@ -107,6 +109,9 @@ func (e *Exporter) Bench(name string, info BenchInfo, causes ...string) *Bench {
 	}
 	b.mu.Lock()
 	defer b.mu.Unlock()
+	if b.allan == nil || info.CarrierHz != b.info.CarrierHz || info.LocalHz != b.info.LocalHz {
+		b.allan = newAllan(info.LocalHz)
+	}
 	b.info = info
 	for _, c := range causes {
 		b.gaps[c] += 0
@@ -159,6 +164,15 @@ func (b *Bench) Reading(r dsp.Reading) {
 		b.breaks += float64(r.PhaseRun - b.run)
 	}
 	b.run = r.PhaseRun
+	b.allan.add(&r)
+}
+
+// Stability returns what the bench's readings so far say of its stability, one
+// for each octave of tau; the limits are for 68 %.
+func (b *Bench) Stability() []stability.State {
+	b.mu.Lock()
+	defer b.mu.Unlock()
+	return b.allan.r.States(nil, oneSigma)
 }
 
 // Samples counts n samples that arrived, nonFinite of them unusable.

@@ -50,7 +50,7 @@ func (e *exitError) Error() string { return e.msg }
 var commands []*command
 
 func init() {
-	commands = []*command{runCommand, measureCommand, exportCommand, inputsCommand, simulateCommand, checkCommand, versionCommand, helpCommand}
+	commands = []*command{runCommand, measureCommand, stabilityCommand, exportCommand, inputsCommand, simulateCommand, checkCommand, versionCommand, helpCommand}
 }
 
 // run is the whole program; it returns the exit code.

@@ -401,7 +401,7 @@ func TestHelp(t *testing.T) {
 			}
 		}
 	}
-	for _, later := range []string{"watch", "stability", "record"} {
+	for _, later := range []string{"watch", "record"} {
 		if code, _, errs := runMain(later); code != 2 || !strings.Contains(errs, "unknown command") {
 			t.Errorf("%s: exit %d, %q", later, code, errs)
 		}

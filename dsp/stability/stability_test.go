@@ -35,26 +35,6 @@ func near(t *testing.T, what string, got, want, rel float64) {
 	}
 }
 
-func TestPublishedOverlapping(t *testing.T) {
-	y, x := lehmer()
-	near(t, "y0", y[0], 0.5748904732, 1e-10)
-	for _, c := range []struct {
-		x    []float64
-		m    int
-		want float64
-		n    int
-	}{ // SP 1065 Tables 30 and 31
-		{x, 1, 2.922319e-01, 999}, {x, 10, 9.159953e-02, 981}, {x, 100, 3.241343e-02, 801},
-		{nbs14(), 1, 91.22945, 8}, {nbs14(), 2, 85.95287, 6},
-	} {
-		got, n := Overlapping(c.x, nil, 1, c.m)
-		near(t, "oadev", got, c.want, 1e-6)
-		if n != c.n {
-			t.Errorf("m %d: %d terms, want %d", c.m, n, c.n)
-		}
-	}
-}
-
 // A gap or a break takes out exactly the differences that touch it: the slow
 // way round is to list the triples.
 func TestGapsAndBreaks(t *testing.T) {
@@ -82,24 +62,6 @@ func TestGapsAndBreaks(t *testing.T) {
 			t.Errorf("m %d: %d terms, want %d", m, gn, n)
 		}
 		near(t, "gappy", got, math.Sqrt(sum/float64(n)/2)/(2*float64(m)), 1e-12)
-	}
-}
-
-// SP 1065 Table 5 by another engine (values computed with NumPy; order white
-// PM, flicker PM, white FM, flicker FM, random walk FM).
-func TestEDF(t *testing.T) {
-	for _, c := range []struct {
-		n, m int
-		want [5]float64
-	}{
-		{1001, 1, [5]float64{500.4990, 610.4141, 665.7796, 868.8091, 1000.0030}},
-		{1001, 10, [5]float64{495.9445, 326.6242, 146.1768, 121.4841, 97.3319}},
-		{1001, 100, [5]float64{445.3951, 64.9710, 13.0024, 9.6272, 7.4223}},
-		{64, 4, [5]float64{30.333333, 24.469989, 20.115942, 16.842105, 13.650497}},
-	} {
-		for i, want := range c.want {
-			near(t, "edf", EDF(Noise(2-i), c.n, c.m), want, 1e-5)
-		}
 	}
 }
 
