@@ -179,7 +179,7 @@ func stepRows() []row {
 			make: func(r *rand.Rand) scene {
 				s := stepped(r, dsp.PullWire)
 				if r.IntN(2) == 0 {
-					s.cfg.LocalTone = s.sim.Tone // that is the carrier's
+					s.cfg.LocalTone, s.misled = s.sim.Tone, true // that is the carrier's
 				}
 				for at := 22 + 4*r.Float64(); len(s.sim.LocalAway) < 4; at += 26 + 8*r.Float64() { // three pulls and one more
 					s.sim.LocalAway = append(s.sim.LocalAway, [2]float64{at, at + 12})

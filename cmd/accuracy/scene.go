@@ -25,6 +25,8 @@ type scene struct {
 
 	ask   dsp.Step // what the user is guided through, from askAt s on; empty: nothing
 	askAt float64
+
+	misled bool // the hint is wrong: only the step puts it right
 }
 
 // played is a scene after it was played.
