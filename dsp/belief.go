@@ -187,7 +187,11 @@ func (e *twoTone) weighClose(y *fitted, mid float64) bool {
 		tr[0] = track{live: true, whole: true, at: at, f: y.carrier(at), uf: y.uc, amp: cmplx.Abs(y.a)}
 		tr[1] = track{live: true, whole: true, at: at, f: y.local(at), uf: y.ul, amp: cmplx.Abs(y.b)}
 		b.add(&tr, at, y.span)
-		b.next = at + y.span/2
+		if b.next = at + y.span/2; y.span >= 8 {
+			// At rest later fits say the same again: where the carrier was headed is
+			// evidence once.
+			b.next = math.Inf(1)
+		}
 	} else {
 		b.align(y.carrier(at), y.local(at))
 	}
